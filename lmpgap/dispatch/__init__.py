@@ -1,0 +1,1 @@
+"""Solve one interval under one formulation; every formulation returns the same neutral result."""

@@ -1,0 +1,116 @@
+"""What every formulation offers, what it is built from, and the registry of names."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Protocol
+
+from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.result import DispatchResult
+from lmpgap.errors import LmpgapError
+from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
+from lmpgap.scenario.settings import DcConvention, Penalties
+from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
+
+FORMULATIONS = ("dc", "dc-loss", "soc", "ac")
+"""In the order of the ladder: each step changes one assumption of the step before."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class DispatchOptions:
+    """What a formulation needs to know besides the network and the interval.
+
+    Attributes
+    ----------
+    dc
+        Susceptance convention of the linear formulations.
+    penalties
+        Prices at which limits give way [$/MWh].
+    voltage_profile : (n_bus,) or None
+        Voltage magnitudes in the loss coefficients of ``dc-loss`` [pu]; ``None`` is 1 pu everywhere.
+    keep_stationarity
+        Keep the active gradients for the uniqueness test.
+    """
+
+    dc: DcConvention = field(default_factory=DcConvention)
+    penalties: Penalties = field(default_factory=Penalties)
+    voltage_profile: FloatArray | None = None
+    keep_stationarity: bool = False
+    tolerances: Tolerances = DEFAULT_TOLERANCES
+
+
+class Formulation(Protocol):
+    """A dispatch problem built once per topology and solved interval by interval."""
+
+    name: str
+
+    def solve(
+        self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None
+    ) -> DispatchResult:
+        """Solve one interval.
+
+        Parameters
+        ----------
+        inputs
+            The interval; its ``branch_in_service`` must be the topology the formulation was built for.
+        flow_limits
+            Limits on weighted sums of from-end active flows (contingencies, interfaces).
+        start
+            A solution of the same interval to start a nonlinear solve from; convex formulations ignore it,
+            so that a result never depends on what was solved before.
+
+        Returns
+        -------
+        DispatchResult
+            With ``status`` telling whether there is a solution; an infeasible interval is a result, not an
+            exception.
+        """
+        ...
+
+
+def build_formulation(
+    name: str, network: Network, branch_in_service: BoolArray, options: DispatchOptions
+) -> Formulation:
+    """Build a formulation for one topology; solver packages are imported here and not before.
+
+    Raises
+    ------
+    LmpgapError
+        For a name that is not one of `FORMULATIONS`.
+    """
+    if name not in _BUILDERS:
+        raise LmpgapError(f"there is no formulation {name!r}; choose from {', '.join(FORMULATIONS)}")
+    return _BUILDERS[name](network, branch_in_service, options)
+
+
+def _build_dc(network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> Formulation:
+    from lmpgap.dispatch.dc import DcDispatch
+
+    return DcDispatch(network, branch_in_service, options)
+
+
+def _build_dc_loss(network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> Formulation:
+    from lmpgap.dispatch.dc_loss import DcLossDispatch
+
+    return DcLossDispatch(network, branch_in_service, options)
+
+
+def _build_soc(network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> Formulation:
+    from lmpgap.dispatch.soc import SocDispatch
+
+    return SocDispatch(network, branch_in_service, options)
+
+
+def _build_ac(network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> Formulation:
+    from lmpgap.dispatch.ac import AcDispatch
+
+    return AcDispatch(network, branch_in_service, options)
+
+
+_BUILDERS: dict[str, Callable[[Network, BoolArray, DispatchOptions], Formulation]] = {
+    "dc": _build_dc,
+    "dc-loss": _build_dc_loss,
+    "soc": _build_soc,
+    "ac": _build_ac,
+}

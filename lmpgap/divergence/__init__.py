@@ -1,0 +1,1 @@
+"""Two price sets side by side: differences, drivers, posted prices."""

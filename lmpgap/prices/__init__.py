@@ -1,0 +1,1 @@
+"""From multipliers to price components, and whether they may be believed."""

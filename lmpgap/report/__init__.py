@@ -1,0 +1,1 @@
+"""View model, figures and the self-contained report."""

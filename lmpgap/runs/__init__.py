@@ -1,0 +1,1 @@
+"""Intervals x formulations: planning, workers, the run folder."""

@@ -1,0 +1,1 @@
+"""Money: positions, loss-component error, rights, the exhibit."""
