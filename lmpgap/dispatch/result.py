@@ -209,7 +209,7 @@ class FrozenFactors:
     loss_distribution : (n_bus,)
         Share of the total loss withdrawn at each bus; sums to one [-].
     energy_multiplier : float
-        Multiplier of the system balance, rise of cost per unit of load at a bus with delivery factor 1 [$/h per pu].
+        Multiplier of the system balance: rise of cost per unit of load where the factor is 1 [$/h per pu].
     """
 
     delivery_factor: FloatArray
