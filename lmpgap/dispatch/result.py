@@ -367,3 +367,20 @@ def no_solution(
         constraints=ConstraintRows.none(network.n_branch),
         residuals=SolverResiduals(primal=np.inf, dual=np.inf, gap=np.inf),
     )
+
+
+def constraint_name(kind: str, contingency: str, monitored: str, direction: str) -> str:
+    """Return the one name under which a constraint appears in every table and picture.
+
+    Examples
+    --------
+    >>> constraint_name("thermal", "", "L6", "reverse")
+    'L6 reverse'
+    >>> constraint_name("contingency", "loss of L2", "L6", "forward")
+    'L6 forward / loss of L2'
+    >>> constraint_name("angle", "", "L6", "upper")
+    'angle L6 upper'
+    """
+    prefix = "" if kind in ("thermal", "contingency") else f"{kind} "
+    suffix = f" / {contingency}" if contingency else ""
+    return f"{prefix}{monitored} {direction}{suffix}"
