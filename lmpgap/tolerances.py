@@ -44,6 +44,15 @@ class Tolerances:
     penalty_match: float = 1e-4
     """A shadow price within this relative distance of its penalty stands at the penalty [-]."""
 
+    # --- security --------------------------------------------------------------------------------------
+    security_excess: float = 1e-5
+    """Post-outage excess that still passes the screening [pu], 1 kW on a 100 MVA base: above the interior-point
+    slack of a limit that was enforced, below anything that moves a price."""
+    security_rounds: int = 30
+    """Screening rounds before the loop gives up and says so [-]."""
+    pairs_per_round: int = 200
+    """Most pairs added in one round [-]: more makes the solve dearer than another round."""
+
     # --- uniqueness --------------------------------------------------------------------------------
     rank_ratio: float = 1e-5
     """Smallest over largest singular value of the row-normalised active gradients below which prices may not

@@ -7,14 +7,12 @@ from dataclasses import dataclass, field
 from typing import Protocol
 
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.names import FORMULATIONS
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.errors import LmpgapError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
 from lmpgap.scenario.settings import DcConvention, Penalties
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
-
-FORMULATIONS = ("dc", "dc-loss", "soc", "ac")
-"""In the order of the ladder: each step changes one assumption of the step before."""
 
 
 @dataclass(frozen=True, kw_only=True)
