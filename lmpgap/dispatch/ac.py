@@ -1,0 +1,310 @@
+"""The AC dispatch: least cost over the full nonlinear network, a local optimum found by an interior-point method.
+
+Polar voltages, exact derivatives from casadi, Ipopt with MUMPS inside: "On the implementation of an interior-point
+filter line-search algorithm for large-scale nonlinear programming", Mathematical Programming 106, 2006. The problem is
+not convex: the answer is a point that satisfies the first-order conditions, called locally optimal, never optimal.
+"""
+
+from __future__ import annotations
+
+import importlib.metadata
+import time
+from collections import OrderedDict
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from lmpgap.dispatch.ac_interval import (
+    AcVectors,
+    Movement,
+    flat_start,
+    interval_vectors,
+    start_from,
+)
+from lmpgap.dispatch.ac_model import AcProgram, AcShape
+from lmpgap.dispatch.ac_result import (
+    AcSolution,
+    balance_multipliers,
+    constraint_rows,
+    outputs_of,
+    point_of,
+    residuals,
+    resource_cost,
+    stationarity_system,
+)
+from lmpgap.dispatch.energised import energised_buses
+from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.result import DispatchResult, SolveStatus, no_solution
+from lmpgap.errors import SolveError
+from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
+
+SOLVER = f"Ipopt with MUMPS (casadi {importlib.metadata.version('casadi')})"
+
+STATUS = {
+    "Solve_Succeeded": SolveStatus.LOCALLY_OPTIMAL,
+    "Solved_To_Acceptable_Level": SolveStatus.INACCURATE,
+    "Infeasible_Problem_Detected": SolveStatus.INFEASIBLE,
+    "Maximum_Iterations_Exceeded": SolveStatus.LIMIT_REACHED,
+    "Maximum_CpuTime_Exceeded": SolveStatus.LIMIT_REACHED,
+    "Maximum_WallTime_Exceeded": SolveStatus.LIMIT_REACHED,
+}
+"""Ipopt's words for how it ended; every other word is `SolveStatus.FAILED`."""
+
+_PROGRAMS_KEPT = 4
+"""Programs kept per topology: the plain one, and the latest sets of added flow limits."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Attempt:
+    """One rung of the ladder of attempts.
+
+    Attributes
+    ----------
+    name
+        What is tried, in words, for the notes of the result.
+    from_start
+        Start from the given solution, if there is one; flat otherwise.
+    settings
+        Ipopt settings besides the common ones.
+    """
+
+    name: str
+    from_start: bool
+    settings: dict[str, object]
+
+
+LADDER = (
+    Attempt(name="the given start", from_start=True, settings={"mu_init": 1e-2}),
+    Attempt(name="a flat start", from_start=False, settings={}),
+    Attempt(
+        name="a flat start with an adaptive barrier",
+        from_start=False,
+        settings={"mu_strategy": "adaptive", "fixed_variable_treatment": "relax_bounds"},
+    ),
+    Attempt(
+        name="the given start with an adaptive barrier",
+        from_start=True,
+        settings={"mu_strategy": "adaptive", "fixed_variable_treatment": "relax_bounds"},
+    ),
+)
+"""Tried in this order until one succeeds; rungs that need a start are left out where none is given."""
+
+
+class AcDispatch:
+    """Least-cost dispatch over the nonlinear network, built once per topology.
+
+    Parameters
+    ----------
+    network
+    branch_in_service : (n_branch,)
+        The topology.
+    options
+        Penalties, tolerances, and whether the active gradients are kept.
+
+    Notes
+    -----
+    Starting from the cone solution of the same interval is quicker and reaches networks that a flat start does not; a
+    solution of another interval is never used, so that a price does not depend on what was solved before.
+    """
+
+    name = "ac"
+
+    def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
+        self._network = network
+        self._branch_in_service = np.asarray(branch_in_service, dtype=bool)
+        self._options = options
+        self._programs: OrderedDict[object, AcProgram] = OrderedDict()
+
+    def solve(
+        self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None
+    ) -> DispatchResult:
+        """Solve one interval.
+
+        Parameters
+        ----------
+        inputs
+            The interval; its topology must be the one the dispatch was built for.
+        flow_limits
+            Limits on weighted sums of from-end active flows.
+        start
+            A solution of the same interval, best of the cone relaxation; flat start otherwise.
+
+        Returns
+        -------
+        DispatchResult
+            A local optimum with `SolveStatus.LOCALLY_OPTIMAL`; otherwise the status and message of the last attempt,
+            with the attempts in ``notes``. Infeasible means that no attempt found a point within the limits: Ipopt
+            stopped where the violation could not be reduced further from there.
+
+        Raises
+        ------
+        SolveError
+            When the interval has another topology.
+        """
+        return self.solve_near(inputs, flow_limits, start=start, movement=None)
+
+    def solve_near(
+        self,
+        inputs: IntervalInputs,
+        flow_limits: FlowLimits,
+        *,
+        start: DispatchResult | None = None,
+        movement: Movement | None = None,
+    ) -> DispatchResult:
+        """Solve one interval, with a price on moving away from a given dispatch if asked for.
+
+        The objective of the result leaves the cost of movement out.
+        """
+        began = time.perf_counter()
+        if not np.array_equal(inputs.branch_in_service, self._branch_in_service):
+            raise SolveError(
+                f"interval {inputs.start} has other branches in service than this dispatch was built for: build one "
+                "dispatch per topology"
+            )
+        program = self._program(inputs, flow_limits, movement is not None)
+        vectors = interval_vectors(program, inputs, flow_limits, self._options, movement)
+        if vectors.contradictions() or program.layout.bus.size == 0:
+            reason = "a lower limit lies above its upper limit" if program.layout.bus.size else "no bus is energised"
+            return self._without_solution(inputs, SolveStatus.INFEASIBLE, reason, 0.0, began, ())
+        given = start if start is not None and start.status.has_solution else None
+        best: tuple[SolveStatus, AcSolution] | None = None
+        notes: list[str] = []
+        seconds = 0.0
+        status, words = SolveStatus.FAILED, ""
+        for attempt in LADDER:
+            if attempt.from_start and given is None:
+                continue
+            x = (
+                start_from(program, vectors, inputs, given)
+                if attempt.from_start and given is not None
+                else flat_start(program, vectors)
+            )
+            before = time.perf_counter()
+            status, words, solution = _run(program, vectors, x, attempt)
+            seconds += time.perf_counter() - before
+            if status.has_solution:
+                best = status, solution
+            if status is SolveStatus.LOCALLY_OPTIMAL:
+                break
+            notes.append(f"from {attempt.name}: {words}")
+        if best is None:
+            return self._without_solution(inputs, status, words, seconds, began, tuple(notes))
+        status, solution = best
+        return self._result(program, vectors, inputs, flow_limits, status, solution, seconds, began, notes)
+
+    def _program(self, inputs: IntervalInputs, flow_limits: FlowLimits, movement: bool) -> AcProgram:
+        shape = AcShape(
+            live=energised_buses(self._network, inputs),
+            branch_in_service=self._branch_in_service,
+            segment_resource=inputs.segments.resource,
+            bid_bus=inputs.bids.bus,
+            flow_weights=flow_limits.weights,
+            movement=movement,
+        )
+        key = shape.key
+        if key in self._programs:
+            self._programs.move_to_end(key)
+        else:
+            self._programs[key] = AcProgram(self._network, shape, self._options)
+            while len(self._programs) > _PROGRAMS_KEPT:
+                self._programs.popitem(last=False)
+        return self._programs[key]
+
+    def _without_solution(
+        self,
+        inputs: IntervalInputs,
+        status: SolveStatus,
+        words: str,
+        seconds: float,
+        began: float,
+        notes: tuple[str, ...],
+    ) -> DispatchResult:
+        result = no_solution(
+            self._network,
+            formulation=self.name,
+            status=status,
+            message=f"interval {inputs.start}: {words}",
+            solver=SOLVER,
+            solver_seconds=seconds,
+            total_seconds=time.perf_counter() - began,
+            n_bid=inputs.bids.bus.size,
+        )
+        return replace(result, notes=notes)
+
+    def _result(
+        self,
+        program: AcProgram,
+        vectors: AcVectors,
+        inputs: IntervalInputs,
+        flow_limits: FlowLimits,
+        status: SolveStatus,
+        solution: AcSolution,
+        seconds: float,
+        began: float,
+        notes: list[str],
+    ) -> DispatchResult:
+        network, layout, options = self._network, program.layout, self._options
+        x, at = solution.x, layout.variables
+        point = point_of(program, x)
+        cost = resource_cost(program, inputs, x)
+        unserved, surplus = np.zeros(network.n_bus), np.zeros(network.n_bus)
+        objective = float(np.sum(cost) - network.base_mva * (inputs.bids.price @ x[at["bid"]]))
+        if options.penalties.power_balance is not None:
+            unserved[layout.bus], surplus[layout.bus] = x[at["unserved"]], x[at["surplus"]]
+            objective += options.penalties.power_balance * network.base_mva * float(np.sum(unserved + surplus))
+        if options.penalties.transmission is not None:
+            slack = float(np.sum(x[at["overload"]]) + np.sum(x[at["overflow"]]))
+            objective += options.penalties.transmission * network.base_mva * slack
+        dead = layout.position < 0
+        if np.any(dead):
+            names = ", ".join(network.buses[i] for i in np.flatnonzero(dead)[:5])
+            notes = [*notes, f"{np.count_nonzero(dead)} buses without a resource in their island are dead: {names}"]
+        return DispatchResult(
+            formulation=self.name,
+            status=status,
+            message=f"local optimum, {status.value}",
+            solver=SOLVER,
+            solver_seconds=seconds,
+            total_seconds=time.perf_counter() - began,
+            objective=objective,
+            p=outputs_of(program, inputs, x),
+            q=x[at["q"]].copy(),
+            resource_cost=cost,
+            bid_served=x[at["bid"]].copy(),
+            unserved=unserved,
+            surplus=surplus,
+            point=point,
+            multipliers=balance_multipliers(program, solution),
+            constraints=constraint_rows(program, inputs, flow_limits, solution, point, options),
+            residuals=residuals(program, vectors, solution),
+            stationarity=(
+                stationarity_system(program, vectors, solution, options) if options.keep_stationarity else None
+            ),
+            notes=tuple(notes),
+        )
+
+
+def _run(
+    program: AcProgram, vectors: AcVectors, x: FloatArray, attempt: Attempt
+) -> tuple[SolveStatus, str, AcSolution]:
+    solver = program.solver(attempt.settings)
+    answer = solver(
+        x0=x,
+        p=vectors.parameter,
+        lbx=vectors.lower,
+        ubx=np.maximum(vectors.lower, vectors.upper),
+        lbg=vectors.row_lower,
+        ubg=np.maximum(vectors.row_lower, vectors.row_upper),
+    )
+    words = str(solver.stats()["return_status"])
+    scale = program.objective_scale
+    solution = AcSolution(
+        x=np.asarray(answer["x"], dtype=float).ravel(),
+        bound_multiplier=np.asarray(answer["lam_x"], dtype=float).ravel() / scale,
+        row_multiplier=np.asarray(answer["lam_g"], dtype=float).ravel() / scale,
+    )
+    status = STATUS.get(words, SolveStatus.FAILED)
+    if status.has_solution and not np.all(np.isfinite(solution.x)):
+        status = SolveStatus.FAILED
+    return status, words.replace("_", " ").lower(), solution

@@ -1,0 +1,147 @@
+"""One interval of the AC dispatch as vectors: bounds, parameters and points to start from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from lmpgap.dispatch.ac_model import AcProgram
+from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.result import DispatchResult
+from lmpgap.scenario.network import FloatArray, IntervalInputs, OfferSegments
+
+_ROOM = 1e-9
+"""Bounds that cross by less than this are rounding, not a contradiction [pu]."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class Movement:
+    """A dispatch to stay close to, and what leaving it costs.
+
+    Attributes
+    ----------
+    p : (n_resource,)
+        Output to stay close to [pu].
+    price : float
+        Cost of each MW of output up or down from it [$/MWh].
+    """
+
+    p: FloatArray
+    price: float
+
+
+@dataclass(frozen=True, kw_only=True)
+class AcVectors:
+    """Bounds on variables and rows, and the parameters, of one interval."""
+
+    lower: FloatArray
+    upper: FloatArray
+    row_lower: FloatArray
+    row_upper: FloatArray
+    parameter: FloatArray
+
+    def contradictions(self) -> int:
+        """Return how many bounds leave nothing in between."""
+        crossed = np.count_nonzero(self.lower > self.upper + _ROOM)
+        return int(crossed + np.count_nonzero(self.row_lower > self.row_upper + _ROOM))
+
+
+def interval_vectors(
+    program: AcProgram,
+    inputs: IntervalInputs,
+    flow_limits: FlowLimits,
+    options: DispatchOptions,
+    movement: Movement | None = None,
+) -> AcVectors:
+    """Return the vectors of one interval for a program of its shape."""
+    network, layout = program.network, program.layout
+    base = network.base_mva
+    lower, upper = np.zeros(layout.n_var), np.full(layout.n_var, np.inf)
+    at = layout.variables
+    lower[at["angle"]] = -np.inf
+    lower[at["angle"]][layout.reference] = 0.0
+    upper[at["angle"]][layout.reference] = 0.0
+    lower[at["magnitude"]], upper[at["magnitude"]] = network.v_min[layout.bus], network.v_max[layout.bus]
+    upper[at["segment"]] = inputs.segments.width
+    on = inputs.resource_in_service
+    lower[at["q"]] = np.where(on, network.q_min, 0.0)
+    upper[at["q"]] = np.where(on, network.q_max, 0.0)
+    bid_live = layout.position[inputs.bids.bus] >= 0
+    upper[at["bid"]] = np.where(bid_live, inputs.bids.width, 0.0)
+    if options.penalties.power_balance is not None:
+        upper[at["unserved"]] = np.maximum(inputs.load_p[layout.bus], 0.0)
+
+    row_lower, row_upper = np.full(layout.n_row, -np.inf), np.zeros(layout.n_row)
+    rows = layout.rows
+    minimum = network.bus_to_resource() @ inputs.p_min
+    for block, amount in (("active", inputs.load_p - minimum), ("reactive", inputs.load_q)):
+        row_lower[rows[block]] = row_upper[rows[block]] = amount[layout.bus]
+    row_upper[rows["thermal_from"]] = row_upper[rows["thermal_to"]] = network.normal_rating[layout.rated] ** 2
+    row_lower[rows["angle"]] = network.angle_min[layout.angle_limited]
+    row_upper[rows["angle"]] = network.angle_max[layout.angle_limited]
+    row_upper[rows["flow"]] = flow_limits.limit
+
+    parameter = np.zeros(layout.n_parameter)
+    parameter[layout.parameters["price"]] = base * inputs.segments.price_start
+    parameter[layout.parameters["slope"]] = base * segment_slope(inputs.segments)
+    parameter[layout.parameters["bid_price"]] = base * inputs.bids.price
+    if movement is not None:
+        parameter[layout.parameters["movement_price"]] = base * movement.price
+        row_lower[rows["movement"]] = row_upper[rows["movement"]] = movement.p - inputs.p_min
+    return AcVectors(lower=lower, upper=upper, row_lower=row_lower, row_upper=row_upper, parameter=parameter)
+
+
+def segment_slope(segments: OfferSegments) -> FloatArray:
+    """Return how the marginal price rises along each segment [$/MWh per pu], zero for a step or an empty one."""
+    rise = segments.price_end - segments.price_start
+    return np.divide(rise, segments.width, out=np.zeros(rise.size), where=segments.width > 0)
+
+
+def flat_start(program: AcProgram, vectors: AcVectors) -> FloatArray:
+    """Return the point with no angles, 1 pu where the band allows it, and outputs in the middle."""
+    layout = program.layout
+    x = np.zeros(layout.n_var)
+    finite = np.isfinite(vectors.lower) & np.isfinite(vectors.upper)
+    x[finite] = 0.5 * (vectors.lower[finite] + vectors.upper[finite])
+    x[layout.variables["magnitude"]] = 1.0
+    for block in ("unserved", "surplus", "overload", "overflow"):
+        x[layout.variables[block]] = 0.0
+    return np.clip(x, vectors.lower, vectors.upper)
+
+
+def start_from(program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, result: DispatchResult) -> FloatArray:
+    """Return the point of another formulation's solution of the same interval.
+
+    Its angles are turned island by island so that the references stand at zero.
+    """
+    network, layout = program.network, program.layout
+    at = layout.variables
+    x = flat_start(program, vectors)
+    island = network.islands(program.shape.branch_in_service)[layout.bus]
+    angle = result.point.angle[layout.bus]
+    turn = np.zeros(int(island.max(initial=-1)) + 1)
+    turn[island[layout.reference]] = angle[layout.reference]
+    x[at["angle"]] = angle - turn[island]
+    x[at["magnitude"]] = np.sqrt(result.point.w[layout.bus])
+    x[at["segment"]] = fill_segments(inputs, result.p)
+    x[at["q"]] = result.q
+    x[at["bid"]] = result.bid_served
+    if at["unserved"].stop > at["unserved"].start:
+        x[at["unserved"]] = result.unserved[layout.bus]
+        x[at["surplus"]] = result.surplus[layout.bus]
+    return np.clip(np.where(np.isfinite(x), x, 0.0), vectors.lower, vectors.upper)
+
+
+def fill_segments(inputs: IntervalInputs, p: FloatArray) -> FloatArray:
+    """Return the output in each segment [pu], filled in the order of the curve, at given outputs (n_resource,)."""
+    segments = inputs.segments
+    order = np.argsort(segments.resource, kind="stable")
+    owner, width = segments.resource[order], segments.width[order]
+    filled = np.cumsum(width) - width
+    first = np.searchsorted(owner, owner)
+    before = filled - filled[first]
+    output = np.empty(width.size)
+    output[order] = np.clip((p - inputs.p_min)[owner] - before, 0.0, width)
+    return output
