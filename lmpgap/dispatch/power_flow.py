@@ -152,7 +152,7 @@ def solve_power_flow(
         worst = int(np.argmax(np.abs(mismatch))) % network.n_bus
         where = f"; largest mismatch {largest:.4g} MW at bus {network.buses[worst]}" if np.isfinite(largest) else ""
         return _not_converged(network, system, iterations, reason + where, largest)
-    p_network, q_network = system.injections(state)
+    _, q_network = system.injections(state)
     slack = np.where(live, system.share * state.missing[system.island_of], 0.0)
     return PowerFlow(
         converged=True,
@@ -231,7 +231,8 @@ class _System:
         n = network.n_bus
 
         def at_buses(leaving_from: FloatArray, leaving_to: FloatArray) -> FloatArray:
-            return np.bincount(network.from_bus, leaving_from, n) + np.bincount(network.to_bus, leaving_to, n)
+            total = np.bincount(network.from_bus, leaving_from, n) + np.bincount(network.to_bus, leaving_to, n)
+            return total.astype(float)
 
         return (
             at_buses(point.p_from, point.p_to) + network.shunt_g * point.w,
