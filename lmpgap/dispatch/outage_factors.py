@@ -6,7 +6,7 @@ its flows onto the rest by
 
     factors_{m,O} = h_{m,O} (I - h_{O,O})^-1            post-outage flow: F_m + factors_{m,O} F_O
 
-"Generalized Line Outage Distribution Factors", IEEE Transactions on Power Systems 22(2), 2007; for a single outage it is
+"Generalized Line Outage Distribution Factors", IEEE Trans. Power Systems 22(2), 2007; for a single outage it is
 the familiar h_mo / (1 - h_oo). I - h_{O,O} is singular exactly when the outage splits the network.
 """
 

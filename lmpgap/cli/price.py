@@ -1,0 +1,99 @@
+"""`price` and `compare`: solve a scenario, and hold one price set against another."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from lmpgap.cli.shared import (
+    FORMULATIONS_HELP,
+    ClusterOption,
+    JsonOption,
+    RunArgument,
+    ScenarioArgument,
+    WorkersOption,
+    echo,
+    echo_json,
+    echo_table,
+    parse_formulations,
+    records,
+    terminal_progress,
+)
+
+
+def price(
+    scenario: ScenarioArgument,
+    run: Annotated[
+        Path, typer.Option("--run", metavar="RUN", help="Run folder to write; an existing one is continued.")
+    ],
+    formulations: Annotated[str, typer.Option("--formulations", help=FORMULATIONS_HELP)] = "dc,dc-loss,soc,ac",
+    workers: WorkersOption = 1,
+    cluster: ClusterOption = None,
+    uniqueness: Annotated[
+        bool, typer.Option("--uniqueness/--no-uniqueness", help="Search price intervals where prices are not unique.")
+    ] = True,
+    factors_from: Annotated[
+        Path | None,
+        typer.Option(
+            "--factors-from", metavar="RUN", help="Freeze the losses of dc-loss at the AC operating points of this run."
+        ),
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Solve every interval, split and certify every price, and store all of it in a run folder.
+
+    A run that was stopped goes on where it stopped; after a change of inputs only the intervals it touches are
+    solved again.
+
+    Example: lmpgap price scenarios/demo --formulations dc,soc,ac --run runs/demo --workers 2
+    """
+    chosen = parse_formulations(formulations)
+    from lmpgap.runs.price import price as price_scenario
+    from lmpgap.runs.summary import summarise_run
+    from lmpgap.scenario.read import read_scenario
+
+    with terminal_progress() as progress:
+        folder = price_scenario(
+            read_scenario(scenario),
+            run,
+            formulations=chosen,
+            workers=workers,
+            cluster=cluster,
+            progress=progress,
+            uniqueness=uniqueness,
+            factors_from=factors_from,
+        )
+    summary = summarise_run(folder)
+    if json:
+        echo_json({"run": folder.path, "formulations": records(summary)})
+        return
+    echo_table(summary)
+    echo(f"\nrun folder: {folder.path}")
+
+
+def compare(
+    run: RunArgument,
+    base: Annotated[str, typer.Option("--base", help="Price set to explain: a formulation, or posted.")] = "dc",
+    against: Annotated[str, typer.Option("--against", help="Price set it is held against.")] = "ac",
+    top: Annotated[int, typer.Option("--top", min=1, help="How many rows of each ranking to print.")] = 10,
+    json: JsonOption = False,
+) -> None:
+    """Show where two price sets differ, by how much, and why, and store the differences and their drivers.
+
+    A difference is the price of AGAINST minus the price of BASE; its drivers add up to it.
+
+    Example: lmpgap compare runs/demo --base dc --against ac
+    """
+    from lmpgap.divergence.compare import compare_run
+    from lmpgap.runs.folder import RunFolder
+
+    comparison = compare_run(RunFolder(run), base, against)
+    rankings = comparison.rankings(top)
+    if json:
+        echo_json({"base": base, "against": against, **{name: records(frame) for name, frame in rankings.items()}})
+        return
+    for title, frame in rankings.items():
+        echo(f"\n{title}")
+        echo_table(frame)

@@ -1,0 +1,172 @@
+"""Solve, price and certify intervals; this is what a worker process runs."""
+
+from __future__ import annotations
+
+from collections import OrderedDict
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import pyarrow as pa
+from threadpoolctl import threadpool_limits
+
+from lmpgap.dispatch.ac_check import ac_check
+from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
+from lmpgap.dispatch.limits import FlowLimits, interface_limits
+from lmpgap.dispatch.outage_factors import OutageFactors
+from lmpgap.dispatch.result import DispatchResult
+from lmpgap.dispatch.security import solve_secure
+from lmpgap.prices.certificate import certify
+from lmpgap.prices.components import PriceSplit, split_prices
+from lmpgap.prices.money import money_balance
+from lmpgap.prices.uniqueness import price_intervals
+from lmpgap.runs.fingerprint import fingerprint
+from lmpgap.runs.plan import PlannedInterval, RunSettings
+from lmpgap.runs.rows import SolvedInterval, chunk_tables
+from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
+
+_TOPOLOGIES_KEPT = 8
+_workspaces: OrderedDict[str, Workspace] = OrderedDict()
+
+
+@dataclass
+class Workspace:
+    """What is built once per topology and used for every interval with it."""
+
+    network: Network
+    branch_in_service: BoolArray
+    options: DispatchOptions
+    outages: OutageFactors | None
+    formulations: dict[str, Formulation]
+
+    def formulation(self, name: str) -> Formulation:
+        """Return a formulation, built on first use."""
+        if name not in self.formulations:
+            self.formulations[name] = build_formulation(name, self.network, self.branch_in_service, self.options)
+        return self.formulations[name]
+
+
+def workspace(network: Network, inputs: IntervalInputs, settings: RunSettings, network_key: str) -> Workspace:
+    """Return the workspace of an interval's topology, kept for the next interval of this process."""
+    key = fingerprint(network_key, inputs.branch_in_service, settings.as_dict())
+    if key in _workspaces:
+        _workspaces.move_to_end(key)
+        return _workspaces[key]
+    made = Workspace(
+        network=network,
+        branch_in_service=inputs.branch_in_service,
+        options=DispatchOptions(
+            dc=settings.dc,
+            penalties=settings.penalties,
+            keep_stationarity=settings.uniqueness,
+            tolerances=settings.tolerances,
+        ),
+        outages=None
+        if network.contingencies is None
+        else OutageFactors(network, inputs.branch_in_service, settings.dc),
+        formulations={},
+    )
+    _workspaces[key] = made
+    while len(_workspaces) > _TOPOLOGIES_KEPT:
+        _workspaces.popitem(last=False)
+    return made
+
+
+def solve_interval(
+    network: Network, planned: PlannedInterval, settings: RunSettings, hours: float, network_key: str
+) -> list[SolvedInterval]:
+    """Solve one interval under its formulations and return each with prices and certificate.
+
+    The AC dispatch starts from the cone solution of the same interval, which is therefore solved even when it was
+    not asked for: the AC result must not depend on which other formulations are in the run.
+    """
+    space = workspace(network, planned.inputs, settings, network_key)
+    results: dict[str, tuple[DispatchResult, FlowLimits]] = {}
+    for name in planned.keys:
+        if name == "ac" and "soc" not in results:
+            results["soc"] = _solve(space, "soc", planned.inputs, None)
+        start = results["soc"][0] if name == "ac" else None
+        results[name] = _solve(space, name, planned.inputs, start)
+    ac = results["ac"][0] if "ac" in results else None
+    return [
+        _priced(space, planned, name, *results[name], ac=ac, settings=settings, hours=hours) for name in planned.keys
+    ]
+
+
+def _solve(
+    space: Workspace, name: str, inputs: IntervalInputs, start: DispatchResult | None
+) -> tuple[DispatchResult, FlowLimits]:
+    limits = interface_limits(space.network, inputs)
+    formulation = space.formulation(name)
+    if space.outages is None:
+        return formulation.solve(inputs, limits, start), limits
+    return solve_secure(formulation, inputs, limits, space.outages, space.options.tolerances, start)
+
+
+def _priced(
+    space: Workspace,
+    planned: PlannedInterval,
+    name: str,
+    result: DispatchResult,
+    limits: FlowLimits,
+    *,
+    ac: DispatchResult | None,
+    settings: RunSettings,
+    hours: float,
+) -> SolvedInterval:
+    network, inputs, tolerances = space.network, planned.inputs, settings.tolerances
+    split: PriceSplit | None = None
+    low: FloatArray | None = None
+    high: FloatArray | None = None
+    money: tuple[tuple[str, str, float], ...] = ()
+    if result.status.has_solution:
+        split = split_prices(
+            network,
+            inputs.branch_in_service,
+            result,
+            planned.weights,
+            tolerances,
+            reactive_sources=settings.reactive_sources,
+        )
+        low = high = split.lmp
+        if result.stationarity is not None:
+            found = price_intervals(result.stationarity, network.base_mva, tolerances)
+            # The interval contains the price that is reported, whatever the tolerance of the search.
+            low, high = np.fmin(found.low, split.lmp), np.fmax(found.high, split.lmp)
+        money = tuple(money_balance(network, inputs, result, split, limits, hours=hours).rows())
+    check = ac_check(network, inputs, result, limits) if result.relaxed and result.status.has_solution else None
+    certificate = certify(network, inputs, result, split, ac=ac, check=check, tolerances=tolerances)
+    return SolvedInterval(
+        start=planned.start,
+        formulation=name,
+        inputs=inputs,
+        result=result,
+        split=split,
+        price_low=low,
+        price_high=high,
+        certificate=certificate,
+        money=money,
+        power_balance_penalty=settings.penalties.power_balance or 0.0,
+    )
+
+
+def solve_chunk(
+    network: Network,
+    planned: Sequence[PlannedInterval],
+    settings: RunSettings,
+    hours: float,
+    network_key: str,
+    finished: Callable[[int], None] | None = None,
+) -> dict[str, pa.Table]:
+    """Solve a chunk of intervals and return its tables.
+
+    One thread per process: with several, the sums of a factorisation depend on how many there are, and results
+    would not be bit-identical for any number of workers.
+    """
+    solved: list[SolvedInterval] = []
+    with threadpool_limits(limits=1):
+        for count, interval in enumerate(planned, start=1):
+            solved += solve_interval(network, interval, settings, hours, network_key)
+            if finished is not None:
+                finished(count)
+    return chunk_tables(network, solved)
