@@ -85,9 +85,22 @@ class Tolerances:
     proximal_away: float = 1e-6
     """The same, away from the base dispatch [$/MWh per MW]."""
 
+    # --- another reference -------------------------------------------------------------------------
+    reference_energy: float = 1e-6
+    """Weighted energy plus loss closer to zero than this cannot be divided by [$/MWh]: it is the noise of a
+    solver's prices, and delivery factors formed with it would be noise. Rounded data raise it further."""
+
     # --- posted prices -----------------------------------------------------------------------------
     posted_rounding: float = 0.005
     """Half a cent: the rounding of posted prices and components [$/MWh]."""
+    smallest_energy_price: float = 0.5
+    """Energy prices nearer to zero than this do not carry a delivery factor [$/MWh]: half a cent of rounding in
+    the loss component would be more than one percent of the factor."""
+
+    # --- drivers -----------------------------------------------------------------------------------
+    smallest_driver: float = 1e-9
+    """Drivers smaller than this are left out of the driver table [$/MWh]; a thousand of them would still add
+    up to 1e-6."""
 
     def as_dict(self) -> dict[str, float]:
         """Return the values by name, for the manifest and the report."""
