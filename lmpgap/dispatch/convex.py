@@ -1,0 +1,175 @@
+"""The frame of the convex formulations: build once per topology, fill and solve per interval, read back."""
+
+from __future__ import annotations
+
+import time
+from abc import ABC, abstractmethod
+from dataclasses import dataclass
+from typing import Any, ClassVar
+
+import numpy as np
+
+from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, solve_program, stationarity_system
+from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.live import LiveNetwork, live_buses, live_network
+from lmpgap.dispatch.program_builder import Affine, ProgramTemplate
+from lmpgap.dispatch.result import (
+    BalanceMultipliers,
+    ConstraintRows,
+    DispatchResult,
+    OperatingPoint,
+    no_solution,
+)
+from lmpgap.dispatch.supply import SupplyResult, pattern_key, read_supply
+from lmpgap.errors import LmpgapError
+from lmpgap.scenario.network import BoolArray, IntArray, IntervalInputs, Network
+
+
+@dataclass(frozen=True, kw_only=True)
+class ConvexModel:
+    """Matrices of one topology and pattern of offers.
+
+    Attributes
+    ----------
+    expressions
+        Named quantities to read back from a solution.
+    """
+
+    live: LiveNetwork
+    template: ProgramTemplate
+    expressions: dict[str, Affine]
+
+
+@dataclass(frozen=True, kw_only=True)
+class Reading:
+    """What a formulation reads from a solution besides the market side."""
+
+    point: OperatingPoint
+    q: np.ndarray
+    multipliers: BalanceMultipliers
+    constraints: ConstraintRows
+    fictitious_loss: float = 0.0
+    changes: dict[str, Any] | None = None
+
+
+class ConvexDispatch(ABC):
+    """A convex formulation of the dispatch, see `lmpgap.dispatch.formulation.Formulation`.
+
+    A result depends on the interval alone: nothing is carried from one solve to the next but matrices.
+    """
+
+    name: ClassVar[str]
+
+    def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
+        self.network = network
+        self.branch_in_service = branch_in_service.copy()
+        self.options = options
+        self._island: IntArray = network.islands(branch_in_service)
+        self._key: tuple[bytes, ...] = ()
+        self._model: ConvexModel | None = None
+
+    def solve(
+        self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None
+    ) -> DispatchResult:
+        """Solve one interval; ``start`` is ignored."""
+        began = time.perf_counter()
+        model = self._model_for(inputs, flow_limits)
+        program = self._fill(model, inputs, flow_limits)
+        solution, notes = solve_program(program, self.options.tolerances)
+        if not solution.status.has_solution:
+            return no_solution(
+                self.network,
+                formulation=self.name,
+                status=solution.status,
+                message=solution.message,
+                solver=solution.solver,
+                solver_seconds=solution.seconds,
+                total_seconds=time.perf_counter() - began,
+                n_bid=inputs.bids.bus.size,
+            )
+        return self._result(model, program, solution, inputs, flow_limits, notes, began)
+
+    @abstractmethod
+    def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
+        """Return the matrices for a live network and a pattern of offers."""
+
+    @abstractmethod
+    def _fill(self, model: ConvexModel, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConicProgram:
+        """Return the program of one interval."""
+
+    @abstractmethod
+    def _read(
+        self,
+        model: ConvexModel,
+        program: ConicProgram,
+        solution: ConicSolution,
+        inputs: IntervalInputs,
+        flow_limits: FlowLimits,
+    ) -> Reading:
+        """Return operating point, multipliers and constraint rows of a solution."""
+
+    def _objective(self, program: ConicProgram, solution: ConicSolution, supply: SupplyResult) -> float:
+        """Return the cost of a solution [$/h]."""
+        return program.cost(solution.x)
+
+    def _model_for(self, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
+        """Return the matrices, built anew only where their pattern changed."""
+        if not np.array_equal(inputs.branch_in_service, self.branch_in_service):
+            raise LmpgapError(
+                f"interval {inputs.start}: its branches in service differ from the topology this {self.name} "
+                "dispatch was built for; build one formulation per topology"
+            )
+        bus_live = live_buses(self.network, self._island, inputs)
+        key = (bus_live.tobytes(), *pattern_key(inputs, flow_limits))
+        if self._model is None or key != self._key:
+            live = live_network(self.network, self.branch_in_service, self._island, bus_live)
+            self._model, self._key = self._build(live, inputs, flow_limits), key
+        return self._model
+
+    def _result(
+        self,
+        model: ConvexModel,
+        program: ConicProgram,
+        solution: ConicSolution,
+        inputs: IntervalInputs,
+        flow_limits: FlowLimits,
+        notes: tuple[str, ...],
+        began: float,
+    ) -> DispatchResult:
+        live, template, options = model.live, model.template, self.options
+        supply = read_supply(template, live, inputs, solution.x)
+        reading = self._read(model, program, solution, inputs, flow_limits)
+        stationarity = None
+        if options.keep_stationarity:
+            rows = template.equalities["balance"].start + live.bus_position
+            stationarity = stationarity_system(
+                program,
+                solution,
+                np.where(live.bus_position >= 0, rows, -1),
+                options.tolerances,
+                self.network.base_mva,
+            )
+        return DispatchResult(
+            formulation=self.name,
+            status=solution.status,
+            message=solution.message,
+            solver=solution.solver,
+            solver_seconds=solution.seconds,
+            objective=self._objective(program, solution, supply),
+            p=supply.p,
+            q=reading.q,
+            resource_cost=supply.resource_cost,
+            bid_served=supply.bid_served,
+            unserved=supply.unserved,
+            surplus=supply.surplus,
+            point=reading.point,
+            multipliers=reading.multipliers,
+            constraints=reading.constraints,
+            residuals=residuals(program, solution),
+            fictitious_loss=reading.fictitious_loss,
+            stationarity=stationarity,
+            notes=(*notes, *live.dead_note()),
+            total_seconds=time.perf_counter() - began,
+            **(reading.changes or {}),
+        )

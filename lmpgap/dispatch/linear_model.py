@@ -1,0 +1,67 @@
+"""How a branch becomes a susceptance and a loss coefficient in the linear formulations."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from lmpgap.scenario.network import FloatArray, Network
+from lmpgap.scenario.settings import DcConvention
+
+
+@dataclass(frozen=True, kw_only=True)
+class LinearBranches:
+    """Coefficients of ``flow = susceptance * (angle_from - angle_to - shift)`` and ``loss = loss_factor * flow^2``.
+
+    Attributes
+    ----------
+    susceptance : (n_branch,)
+        [pu/rad]
+    shift : (n_branch,)
+        [rad]; zero where the convention leaves phase shifts out.
+    loss_factor : (n_branch,)
+        Loss per squared flow [1/pu].
+    """
+
+    susceptance: FloatArray
+    shift: FloatArray
+    loss_factor: FloatArray
+
+    @property
+    def conductance(self) -> FloatArray:
+        """Loss per squared angle across the branch [pu/rad^2], shape (n_branch,)."""
+        return self.loss_factor * self.susceptance**2
+
+
+def linear_branches(
+    network: Network, convention: DcConvention, voltage_profile: FloatArray | None = None
+) -> LinearBranches:
+    """Return the coefficients of all branches under a convention.
+
+    With ``"impedance"`` the series element is g + jb = conj(1/(r + jx)), with ``"reactance"`` b = 1/x and
+    g = r/x^2. Its loss at a given flow is (g/b^2) flow^2 at 1 pu; at other voltages the same flow needs a current
+    that falls with the voltage, so the factor is divided by the product of the voltages at both ends of the series
+    element. A tap ratio divides the susceptance and leaves the loss of a given flow alone. Negative resistances, as
+    in star equivalents of three-winding transformers, count as lossless: a loss that falls with flow is not convex.
+
+    Parameters
+    ----------
+    voltage_profile : (n_bus,) or None
+        Voltage magnitudes [pu]; ``None`` is 1 pu at every series element.
+    """
+    r, x = network.r, network.x
+    square = r**2 + x**2 if convention.susceptance == "impedance" else x**2
+    # A purely resistive branch has no reactance to divide by; it carries nothing in a linear dispatch.
+    defined = (x != 0.0) & (square > 0.0)
+    susceptance = np.divide(x, square, out=np.zeros_like(x), where=defined)
+    loss_factor = np.divide(np.maximum(r, 0.0) * square, x**2, out=np.zeros_like(x), where=defined)
+    tap = network.tap if convention.taps else np.ones_like(network.tap)
+    if voltage_profile is not None:
+        product = voltage_profile[network.from_bus] / tap * voltage_profile[network.to_bus]
+        loss_factor = loss_factor / product
+    return LinearBranches(
+        susceptance=susceptance / tap,
+        shift=network.shift if convention.taps else np.zeros_like(network.shift),
+        loss_factor=loss_factor,
+    )
