@@ -297,6 +297,13 @@ class DispatchResult:
     residuals : SolverResiduals
     fictitious_loss : float
         Loss beyond the physical one that the model carries [pu]; zero where the model has none.
+    relaxed : bool
+        True when the model is a relaxation of the network: its voltages and flows need not belong to any set of
+        angles, and its price needs an AC check before it is used.
+    cone_slack : float
+        Largest slack of a relaxed cone [pu]; zero where there is none.
+    loop_angle : float
+        Largest angle sum around a loop of the relaxed products [rad]; zero where angles are variables.
     loss_slack_open : bool
         True when a relaxed loss had to be replaced by frozen factors.
     frozen : FrozenFactors or None
@@ -324,6 +331,9 @@ class DispatchResult:
     constraints: ConstraintRows
     residuals: SolverResiduals
     fictitious_loss: float = 0.0
+    relaxed: bool = False
+    cone_slack: float = 0.0
+    loop_angle: float = 0.0
     loss_slack_open: bool = False
     frozen: FrozenFactors | None = None
     stationarity: StationaritySystem | None = None
