@@ -107,8 +107,8 @@ def compare_sets(
     own = np.zeros(base.n_interval, dtype=bool)
     if reference_weights is not None:
         weights = weights_for(base, reference_weights)
-        moved_base, identified_base = base.rereferenced(weights, tolerances)
-        moved_against, identified_against = against.rereferenced(weights, tolerances)
+        moved_base, identified_base = base.rereferenced(weights, tolerances=tolerances)
+        moved_against, identified_against = against.rereferenced(weights, tolerances=tolerances)
         base, against = moved_base, moved_against
         own = ~(identified_base & identified_against)
     return Comparison(

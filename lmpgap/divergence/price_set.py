@@ -15,6 +15,7 @@ import pandas as pd
 
 from lmpgap.dispatch.result import constraint_name
 from lmpgap.errors import DataError
+from lmpgap.prices.reference import ReferencedComponents, rereference
 from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
@@ -144,58 +145,60 @@ class PriceSet:
         )
 
     def rereferenced(
-        self, weights: FloatArray, tolerances: Tolerances = DEFAULT_TOLERANCES
+        self,
+        weights: FloatArray,
+        *,
+        island: IntArray | None = None,
+        tolerances: Tolerances = DEFAULT_TOLERANCES,
     ) -> tuple[PriceSet, BoolArray]:
         """Return the same prices with their components on another reference.
 
         Parameters
         ----------
         weights : (n_bus,) or (n_interval, n_bus)
-            Reference weights [-]; each interval's must sum to one. Buses without a price must weigh nothing.
+            Reference weights [-]; buses without a price must weigh nothing.
+        island : (n_bus,)
+            Island number of each bus; one island unless given.
 
         Returns
         -------
         PriceSet
             Prices are untouched. Intervals that cannot be moved keep their own reference.
         identified : (n_interval,)
-            False where ``energy + sum of weights x loss`` is so near zero that the split on the new reference is
-            not determined, or where the energy component differs between buses (islands).
-
-        Notes
-        -----
-        With v the weights: DF' = (e + L)/(e + v'L), energy' = v'lmp, loss' = energy'(DF' - 1), and every
-        congestion or reactive part C becomes C - DF' v'C. The lossless rule (without DF') is wrong as soon as
-        there are losses. Needs no network, so it serves posted prices too.
+            False where the components do not determine those on the new reference, or where the energy component
+            differs between buses although no islands are known.
         """
         v = np.broadcast_to(np.asarray(weights, dtype=float), self.lmp.shape)
-        carried = self.energy + self.loss
-        denominator = _weighted(v, carried)
-        # Islands have an energy price each; one set of weights cannot be a reference for all of them.
-        spread = np.nanmax(self.energy, axis=1, initial=-np.inf) - np.nanmin(self.energy, axis=1, initial=np.inf)
-        identified = (np.abs(denominator) >= tolerances.smallest_energy_price) & (
-            spread <= 4.0 * tolerances.posted_rounding
-        )
-        with np.errstate(divide="ignore", invalid="ignore"):
-            factor = carried / denominator[:, None]
-        energy = np.broadcast_to(_weighted(v, self.lmp)[:, None], self.lmp.shape)
 
-        def moved(part: FloatArray, rows: IntArray | slice) -> FloatArray:
-            return np.where(identified[rows][:, None], part - factor[rows] * _weighted(v[rows], part)[:, None], part)
+        def moved(rows: IntArray | slice, congestion: FloatArray, reactive: FloatArray) -> ReferencedComponents:
+            return rereference(
+                self.energy[rows], self.loss[rows], congestion, reactive, v[rows],
+                island=island, strict=False, tolerances=tolerances,
+            )  # fmt: skip
 
-        every = slice(None)
-
-        def moved_block(block: ContributionBlock) -> ContributionBlock:
-            return replace(block, amount=moved(block.amount, block.interval))
-
+        whole = moved(slice(None), self.congestion, self.reactive)
+        priced = np.isfinite(self.energy + self.loss)
+        identified = np.all(whole.identifiable | ~priced, axis=1) & priced.any(axis=1)
+        if island is None:
+            ends = [np.where(priced, self.energy, fill).T for fill in (-np.inf, np.inf)]
+            spread = np.max(ends[0], axis=0) - np.min(ends[1], axis=0)
+            identified &= spread <= 4.0 * tolerances.posted_rounding
         keep = ~identified[:, None]
+
+        def block(part: ContributionBlock) -> ContributionBlock:
+            if part.interval.size == 0:
+                return part
+            amount = moved(part.interval, part.amount, np.zeros_like(part.amount)).congestion
+            return replace(part, amount=np.where(keep[part.interval], part.amount, amount))
+
         return replace(
             self,
-            energy=np.where(keep, self.energy, energy),
-            loss=np.where(keep, self.loss, energy * (factor - 1.0)),
-            congestion=moved(self.congestion, every),
-            reactive=moved(self.reactive, every),
-            congestion_parts=moved_block(self.congestion_parts),
-            reactive_parts=moved_block(self.reactive_parts),
+            energy=np.where(keep, self.energy, whole.energy),
+            loss=np.where(keep, self.loss, whole.loss),
+            congestion=np.where(keep, self.congestion, whole.congestion),
+            reactive=np.where(keep, self.reactive, whole.reactive),
+            congestion_parts=block(self.congestion_parts),
+            reactive_parts=block(self.reactive_parts),
         ), identified
 
     def with_hubs(self, hubs: pd.DataFrame) -> PriceSet:
@@ -257,11 +260,6 @@ def common_ground(base: PriceSet, against: PriceSet) -> tuple[PriceSet, PriceSet
 def places(index: pd.Index[str] | pd.DatetimeIndex, values: pd.Series[Any]) -> IntArray:
     """Return where each value stands in an index, -1 where it does not."""
     return np.asarray(index.get_indexer(pd.Index(values)), dtype=np.int64)
-
-
-def _weighted(weights: FloatArray, values: FloatArray) -> FloatArray:
-    """Return the weighted sum over buses; a missing value counts only where it has weight."""
-    return np.asarray(np.einsum("ij,ij->i", weights, np.where(weights == 0.0, 0.0, values)))
 
 
 def _positions(

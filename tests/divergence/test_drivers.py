@@ -210,7 +210,7 @@ def test_an_interval_without_a_reference_keeps_its_own_and_is_listed():
     rng = np.random.default_rng(5)
     prices = price_set(random_run(rng, "dc", n_constraint=0), "dc")
     energy = prices.energy.copy()
-    energy[1] = -0.001
+    energy[1] = 0.0
     flat = replace(prices, energy=energy, loss=np.where([[False], [True], [False]], 0.0, prices.loss))
     flat = replace(flat, lmp=flat.energy + flat.loss + flat.congestion + flat.reactive)
     weights = pd.Series(0.2, index=prices.buses)
