@@ -69,6 +69,11 @@ class Tolerances:
     """Largest angle sum around a loop of an exact relaxation [deg]."""
     exact_mismatch_mw: float = 0.01
     """Largest AC mismatch of an exact relaxation [MW]."""
+    exact_overload: float = 1e-4
+    """Relative overload up to which a limit holds in an exact relaxation [-]: limits bind there, and the mismatch
+    that is accepted moves flows by that much."""
+    exact_voltage_pu: float = 1e-5
+    """The same for the voltage band [pu]."""
     close_gap: float = 2.5e-3
     """Cost gap up to which a relaxed price is close [-] (0.25 %)."""
     close_overload: float = 0.01
