@@ -300,6 +300,27 @@ RUN_TABLES: dict[str, RunTable] = {
                 ]
             ),
         ),
+        RunTable(
+            "sweep",
+            "How the formulations drift apart as load grows; means over the hours that solved.",
+            _columns(
+                [
+                    ("load_factor", "number", "-", "all load is multiplied by this"),
+                    _FORMULATION,
+                    ("hours", "number", "", "intervals with a solution"),
+                    ("hours_asked", "number", "", "intervals that were tried"),
+                    ("load_mw", "number", "MW", "served load"),
+                    ("generation_mw", "number", "MW", ""),
+                    ("losses_mw", "number", "MW", ""),
+                    ("cost", "number", "$/h", ""),
+                    ("mean_price", "number", "$/MWh", "load-weighted"),
+                    ("price_error", "number", "$/MWh", "mean absolute difference from ac over buses"),
+                    ("loss_component_error", "number", "$/MWh", "the same of the loss component"),
+                    ("cost_error", "number", "$/h", "cost less that of ac"),
+                    ("angle_error_deg", "number", "deg", "largest difference of a branch angle from ac"),
+                ]
+            ),
+        ),
     )
 }
 

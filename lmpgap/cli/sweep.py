@@ -1,0 +1,86 @@
+"""`sweep`: how the divergence grows with loading."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from lmpgap.cli.shared import (
+    FORMULATIONS_HELP,
+    JsonOption,
+    ScenarioArgument,
+    echo,
+    echo_json,
+    echo_table,
+    parse_formulations,
+    records,
+    terminal_progress,
+)
+
+
+def sweep(
+    scenario: ScenarioArgument,
+    lowest: Annotated[float, typer.Option("--from", min=0.01, help="Smallest load factor.")] = 0.5,
+    highest: Annotated[float, typer.Option("--to", min=0.01, help="Largest load factor.")] = 1.2,
+    steps: Annotated[int, typer.Option("--steps", min=2, max=200, help="How many load factors.")] = 8,
+    intervals: Annotated[
+        str,
+        typer.Option(
+            "--intervals", help="`peak` (the hour with the highest load), `all`, or positions such as 0,12,18."
+        ),
+    ] = "peak",
+    formulations: Annotated[str, typer.Option("--formulations", help=FORMULATIONS_HELP)] = "dc,dc-loss,soc,ac",
+    out: Annotated[
+        Path | None, typer.Option("--out", metavar="FILE", help="Write the picture as an HTML file.")
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Scale all load and show how generation, cost, price and loss-component differences to the AC dispatch grow.
+
+    Example: lmpgap sweep scenarios/demo --from 0.5 --to 1.2 --out sweep.html
+    """
+    chosen = parse_formulations(formulations)
+    if highest <= lowest:
+        raise typer.BadParameter("--to must be larger than --from")
+    import numpy as np
+
+    from lmpgap.runs.sweep import sweep as sweep_load
+    from lmpgap.scenario.read import read_scenario
+
+    loaded = read_scenario(scenario)
+    positions = _positions(intervals, len(loaded.interval_starts))
+    with terminal_progress() as progress:
+        table = sweep_load(
+            loaded,
+            np.linspace(lowest, highest, steps),
+            positions=positions,
+            formulations=chosen,
+            progress=progress,
+        )
+    if out is not None:
+        from lmpgap.report.sweep_page import write_sweep_page
+
+        write_sweep_page(table, loaded.settings.name, loaded.settings.currency, out)
+    if json:
+        echo_json(records(table))
+        return
+    echo_table(table)
+    if out is not None:
+        echo(f"\npicture: {out}")
+
+
+def _positions(text: str, n_interval: int) -> list[int] | None:
+    if text == "peak":
+        return None
+    if text == "all":
+        return list(range(n_interval))
+    try:
+        chosen = [int(part) for part in text.split(",")]
+    except ValueError:
+        raise typer.BadParameter(f"{text!r} is neither `peak`, `all` nor positions such as 0,12,18") from None
+    wrong = [str(p) for p in chosen if not 0 <= p < n_interval]
+    if wrong:
+        raise typer.BadParameter(f"there is no interval {', '.join(wrong)}; the scenario has 0 to {n_interval - 1}")
+    return chosen
