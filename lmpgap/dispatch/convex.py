@@ -12,13 +12,14 @@ import numpy as np
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, solve_program, stationarity_system
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
-from lmpgap.dispatch.live import LiveNetwork, live_buses, live_network
+from lmpgap.dispatch.live import LiveNetwork, bus_list, live_buses, live_network
 from lmpgap.dispatch.program_builder import Affine, ProgramTemplate
 from lmpgap.dispatch.result import (
     BalanceMultipliers,
     ConstraintRows,
     DispatchResult,
     OperatingPoint,
+    SolveStatus,
     no_solution,
 )
 from lmpgap.dispatch.supply import SupplyResult, pattern_key, read_supply
@@ -75,6 +76,18 @@ class ConvexDispatch(ABC):
         """Solve one interval; ``start`` is ignored."""
         began = time.perf_counter()
         model = self._model_for(inputs, flow_limits)
+        stranded = model.live.dead()[inputs.load_p[model.live.dead()] != 0.0]
+        if stranded.size and self.options.penalties.power_balance is None:
+            return no_solution(
+                self.network,
+                formulation=self.name,
+                status=SolveStatus.INFEASIBLE,
+                message=f"no resource in service is connected to the load at {bus_list(self.network, stranded)}",
+                solver="",
+                solver_seconds=0.0,
+                total_seconds=time.perf_counter() - began,
+                n_bid=inputs.bids.bus.size,
+            )
         program = self._fill(model, inputs, flow_limits)
         solution, notes = solve_program(program, self.options.tolerances)
         if not solution.status.has_solution:
@@ -169,7 +182,14 @@ class ConvexDispatch(ABC):
             residuals=residuals(program, solution),
             fictitious_loss=reading.fictitious_loss,
             stationarity=stationarity,
-            notes=(*notes, *live.dead_note()),
+            notes=(*notes, *_dead_note(self.network, live)),
             total_seconds=time.perf_counter() - began,
             **(reading.changes or {}),
         )
+
+
+def _dead_note(network: Network, live: LiveNetwork) -> tuple[str, ...]:
+    dead = live.dead()
+    if dead.size == 0:
+        return ()
+    return (f"no price at {bus_list(network, dead)}: no resource in service is connected",)

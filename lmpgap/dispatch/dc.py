@@ -23,15 +23,16 @@ from lmpgap.dispatch.linear_model import linear_branches
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, branch_gain, constraint_rows, flow_limit_rows
 from lmpgap.dispatch.supply import (
     add_flow_limits,
     add_supply,
     fixed_withdrawal,
+    rated_branches,
     supply_costs,
     transmission_costs,
 )
-from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
+from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
 
 
 class DcDispatch(ConvexDispatch):
@@ -80,7 +81,7 @@ class DcDispatch(ConvexDispatch):
         across = angle.mapped(sparse.csr_array((live.from_incidence - live.to_incidence).T))
         builder.equality("branch", flow.scaled(scale) - across.scaled(b * scale), -b * scale * shift)
 
-        rated = rated_branches(network, live)
+        rated = rated_branches(live)
         forward, reverse = p_from.take(rated), p_to.take(rated)
         if penalties.transmission is not None:
             # One excess per branch: both ends give way together, so their shadow prices add up to the penalty.
@@ -180,7 +181,7 @@ class DcDispatch(ConvexDispatch):
             return solution.x[template.variables[name]] if name in template.variables else None
 
         parts = []
-        rated = live.branch[rated_branches(network, live)]
+        rated = live.branch[rated_branches(live)]
         gave_way = at_penalty(
             dual["thermal forward"] + dual["thermal reverse"], excess("excess"), penalty, tolerances, base
         )
@@ -241,13 +242,3 @@ class DcDispatch(ConvexDispatch):
             )
         )
         return ConstraintRows.concatenate(parts, network.n_branch)
-
-
-def rated_branches(network: Network, live: LiveNetwork) -> IntArray:
-    """Return the live positions of branches with a rating."""
-    return np.flatnonzero(np.isfinite(network.normal_rating[live.branch]))
-
-
-def branch_gain(branch: IntArray, gain: FloatArray, n_branch: int) -> sparse.csr_array:
-    """Return one row per entry with its gain at its own branch, shape (n, n_branch)."""
-    return sparse.csr_array((gain, (np.arange(branch.size), branch)), shape=(branch.size, n_branch))

@@ -1,7 +1,8 @@
 """The part of a network that is alive in an interval, with its own numbering.
 
-A bus is dead when its island has neither a resource in service nor fixed load: nothing determines a price there.
-Dead buses and branches out of service are left out of every program and put back as ``nan`` and zero.
+A bus is dead when its island has no resource in service: nothing can hold its voltage or serve another MW, so there
+is no price. Dead buses and branches out of service are left out of every program and put back as ``nan`` and zero.
+Load at a dead bus goes unserved at the power balance penalty; without a penalty the interval is infeasible.
 """
 
 from __future__ import annotations
@@ -74,23 +75,16 @@ class LiveNetwork:
         result[self.branch] = values
         return result
 
-    def dead_note(self) -> tuple[str, ...]:
-        """Return a sentence that names the dead buses, if there are any."""
-        dead = np.flatnonzero(self.bus_position < 0)
-        if dead.size == 0:
-            return ()
-        names = ", ".join(self.network.buses[i] for i in dead[:10])
-        more = f" and {dead.size - 10} more" if dead.size > 10 else ""
-        return (f"no price at {names}{more}: neither a resource in service nor load is connected",)
+    def dead(self) -> IntArray:
+        """Return the positions of the dead buses."""
+        return np.flatnonzero(self.bus_position < 0)
 
 
 def live_buses(network: Network, island: IntArray, inputs: IntervalInputs) -> BoolArray:
-    """Return True at each bus whose island has a resource in service or fixed load, shape (n_bus,)."""
-    n_island = int(island.max(initial=-1)) + 1
-    fed = np.zeros(n_island, dtype=bool)
+    """Return True at each bus whose island has a resource in service, shape (n_bus,)."""
+    fed = np.zeros(int(island.max(initial=-1)) + 1, dtype=bool)
     fed[island[network.resource_bus[inputs.resource_in_service]]] = True
-    fed[island[(inputs.load_p != 0.0) | (inputs.load_q != 0.0)]] = True
-    return fed[island]
+    return np.asarray(fed[island], dtype=bool)
 
 
 def live_network(network: Network, branch_in_service: BoolArray, island: IntArray, bus_live: BoolArray) -> LiveNetwork:
@@ -132,3 +126,9 @@ def live_network(network: Network, branch_in_service: BoolArray, island: IntArra
         island=island[bus],
         bus_position=position,
     )
+
+
+def bus_list(network: Network, positions: IntArray) -> str:
+    """Return bus names for a message, ten at most."""
+    names = ", ".join(network.buses[i] for i in positions[:10].tolist())
+    return names + (f" and {positions.size - 10} more" if positions.size > 10 else "")

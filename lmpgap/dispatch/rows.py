@@ -9,7 +9,7 @@ from scipy import sparse
 
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import ConstraintRows
-from lmpgap.scenario.network import FloatArray
+from lmpgap.scenario.network import FloatArray, IntArray
 from lmpgap.tolerances import Tolerances
 
 
@@ -37,12 +37,12 @@ def constraint_rows(
         Distance to the limit, in internal units; negative where the limit gave way.
     """
     threshold = np.maximum(tolerances.active_slack_mw / base_mva, tolerances.active_slack_relative * np.abs(limit))
-    shown = np.flatnonzero((multiplier / to_unit > tolerances.shadow_price) | (slack <= threshold))
+    shown: IntArray = np.flatnonzero((multiplier / to_unit > tolerances.shadow_price) | (slack <= threshold))
     return ConstraintRows(
         kind=(kind,) * shown.size,
         contingency=("",) * shown.size,
-        monitored=tuple(monitored[i] for i in shown),
-        direction=tuple(direction[i] for i in shown),
+        monitored=tuple(monitored[i] for i in shown.tolist()),
+        direction=tuple(direction[i] for i in shown.tolist()),
         unit=(unit,) * shown.size,
         to_unit=np.full(shown.size, to_unit),
         limit=limit[shown],
@@ -78,7 +78,7 @@ def flow_limit_rows(
     threshold = np.maximum(
         tolerances.active_slack_mw / base_mva, tolerances.active_slack_relative * np.abs(flow_limits.limit)
     )
-    shown = np.flatnonzero((multiplier / base_mva > tolerances.shadow_price) | (slack <= threshold))
+    shown: IntArray = np.flatnonzero((multiplier / base_mva > tolerances.shadow_price) | (slack <= threshold))
     gave_way = at_penalty(multiplier, excess, penalty, tolerances, base_mva)
     return ConstraintRows(
         kind=tuple(flow_limits.kind[i] for i in shown),
@@ -118,3 +118,8 @@ def at_penalty(
     price = multiplier / base_mva
     stands = np.abs(price - penalty) <= tolerances.penalty_match * abs(penalty)
     return np.asarray(stands | (excess > tolerances.active_slack_mw / base_mva))
+
+
+def branch_gain(branch: IntArray, gain: FloatArray, n_branch: int) -> sparse.csr_array:
+    """Return one row per entry with its gain at its own branch, shape (n, n_branch)."""
+    return sparse.csr_array((gain, (np.arange(branch.size), branch)), shape=(branch.size, n_branch))

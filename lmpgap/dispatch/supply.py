@@ -10,7 +10,7 @@ from scipy import sparse
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder, ProgramTemplate
-from lmpgap.scenario.network import FloatArray, IntervalInputs, incidence
+from lmpgap.scenario.network import FloatArray, IntArray, IntervalInputs, incidence
 from lmpgap.scenario.settings import Penalties
 
 
@@ -44,16 +44,21 @@ def add_supply(builder: ProgramBuilder, live: LiveNetwork, inputs: IntervalInput
     """
     segments, bids = inputs.segments, inputs.bids
     owner_bus = live.bus_position[live.network.resource_bus[segments.resource]]
-    injection = builder.variable("segment", segments.resource.size, lower=0.0).mapped(_at(owner_bus, live.n_bus))
+    injection = builder.variable("segment", segments.resource.size, lower=0.0).mapped(placed(owner_bus, live.n_bus))
     served = builder.variable("bid", bids.bus.size, lower=0.0)
-    injection = injection - served.mapped(_at(live.bus_position[bids.bus], live.n_bus))
+    injection = injection - served.mapped(placed(live.bus_position[bids.bus], live.n_bus))
     if penalties.power_balance is not None:
         injection = injection + builder.variable("unserved", live.n_bus, lower=0.0)
         injection = injection - builder.variable("surplus", live.n_bus, lower=0.0)
     return injection
 
 
-def _at(bus: np.ndarray, n_bus: int) -> sparse.csr_array:
+def rated_branches(live: LiveNetwork) -> IntArray:
+    """Return the live positions of branches with a rating."""
+    return np.flatnonzero(np.isfinite(live.network.normal_rating[live.branch]))
+
+
+def placed(bus: IntArray, n_bus: int) -> sparse.csr_array:
     """Return the (n_bus, n) incidence of positions; a dead position (-1) injects nowhere."""
     live = (bus >= 0).astype(float)
     matrix = incidence(np.maximum(bus, 0), n_bus)
@@ -82,7 +87,10 @@ def supply_costs(
     if penalties.power_balance is not None:
         linear |= {"unserved": base * penalties.power_balance, "surplus": base * penalties.power_balance}
         upper["unserved"] = np.maximum(inputs.load_p[live.bus], 0.0)
-    return linear, quadratic, upper, float(inputs.fixed_cost.sum())
+    fixed_cost = float(inputs.fixed_cost.sum())
+    if penalties.power_balance is not None:
+        fixed_cost += base * penalties.power_balance * float(np.abs(inputs.load_p[live.dead()]).sum())
+    return linear, quadratic, upper, fixed_cost
 
 
 def _slope(inputs: IntervalInputs) -> FloatArray:
@@ -100,17 +108,21 @@ def read_supply(template: ProgramTemplate, live: LiveNetwork, inputs: IntervalIn
     cost = network.base_mva * output * (segments.price_start + 0.5 * _slope(inputs) * output)
     resource_cost = inputs.fixed_cost + np.bincount(segments.resource, weights=cost, minlength=network.n_resource)
 
-    def at_buses(name: str) -> FloatArray:
-        if name not in template.variables:
-            return np.zeros(network.n_bus)
-        return live.to_buses(x[template.variables[name]], 0.0)
+    dead = live.dead()
+
+    def at_buses(name: str, at_dead: FloatArray) -> FloatArray:
+        values = np.zeros(network.n_bus)
+        if name in template.variables:
+            values[live.bus] = x[template.variables[name]]
+            values[dead] = np.maximum(at_dead, 0.0)
+        return values
 
     return SupplyResult(
         p=inputs.p_min + above,
         resource_cost=resource_cost,
         bid_served=x[template.variables["bid"]].copy(),
-        unserved=at_buses("unserved"),
-        surplus=at_buses("surplus"),
+        unserved=at_buses("unserved", inputs.load_p[dead]),
+        surplus=at_buses("surplus", -inputs.load_p[dead]),
     )
 
 
