@@ -200,10 +200,10 @@ class AcProgram:
         start, end = layout.position[network.from_bus[branch]], layout.position[network.to_bus[branch]]
         n_live = layout.bus.size
         angle, magnitude = value["angle"], value["magnitude"]
-        difference = angle[start.tolist()] - angle[end.tolist()]
+        difference = _entries(angle, start) - _entries(angle, end)
         square = magnitude * magnitude
-        square_from, square_to = square[start.tolist()], square[end.tolist()]
-        product = magnitude[start.tolist()] * magnitude[end.tolist()]
+        square_from, square_to = _entries(square, start), _entries(square, end)
+        product = _entries(magnitude, start) * _entries(magnitude, end)
         c, s = product * casadi.cos(difference), product * casadi.sin(difference)
 
         def flow(coefficients: FlowCoefficients, own: Any) -> Any:
@@ -242,10 +242,10 @@ class AcProgram:
             active += value["unserved"] - value["surplus"]
             cost += options.penalties.power_balance * base * casadi.sum1(value["unserved"] + value["surplus"])
 
-        rated = np.searchsorted(branch, layout.rated).tolist()
+        rated = np.searchsorted(branch, layout.rated)
         rating = casadi.DM(network.normal_rating[layout.rated])
-        thermal_from = p_from[rated] ** 2 + q_from[rated] ** 2
-        thermal_to = p_to[rated] ** 2 + q_to[rated] ** 2
+        thermal_from = _entries(p_from, rated) ** 2 + _entries(q_from, rated) ** 2
+        thermal_to = _entries(p_to, rated) ** 2 + _entries(q_to, rated) ** 2
         flow_rows = _times(self.shape.flow_weights[:, branch], p_from)
         if options.penalties.transmission is not None:
             # (rating + slack)^2 less rating^2, so that the row's bound is rating^2 with and without a penalty.
@@ -257,8 +257,10 @@ class AcProgram:
         movement = above_minimum - value["up"] + value["down"] if self.shape.movement else casadi.SX(0, 1)
         if self.shape.movement:
             cost += price["movement_price"] * casadi.sum1(value["up"] + value["down"])
-        limited = np.searchsorted(branch, layout.angle_limited).tolist()
-        rows = casadi.vertcat(active, reactive, thermal_from, thermal_to, difference[limited], flow_rows, movement)
+        limited = np.searchsorted(branch, layout.angle_limited)
+        rows = casadi.vertcat(
+            active, reactive, thermal_from, thermal_to, _entries(difference, limited), flow_rows, movement
+        )
         return {"x": x, "p": parameter, "f": self.objective_scale * cost, "g": casadi.densify(rows)}
 
     def solver(self, settings: dict[str, object]) -> Any:
@@ -322,6 +324,11 @@ def _placed(position: IntArray, n_live: int) -> sparse.csr_array:
     """Return (n_live, len(position)) with a one where an item stands at an energised bus."""
     there = np.flatnonzero(position >= 0)
     return sparse.csr_array((np.ones(there.size), (position[there], there)), shape=(n_live, position.size))
+
+
+def _entries(vector: Any, position: IntArray) -> Any:
+    """Return a column of the chosen entries; casadi itself makes a row of no entries."""
+    return vector[position.tolist()] if position.size else casadi.SX(0, 1)
 
 
 def _times(matrix: sparse.sparray, vector: Any) -> Any:
