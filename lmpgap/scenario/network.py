@@ -242,6 +242,4 @@ class IntervalInputs:
 def incidence(column: IntArray, n_column: int) -> sparse.csr_array:
     """Return a (len(column), n_column) matrix with a single one per row."""
     n_row = column.size
-    return sparse.csr_array(
-        (np.ones(n_row), column.astype(np.int64), np.arange(n_row + 1)), shape=(n_row, n_column)
-    )
+    return sparse.csr_array((np.ones(n_row), column.astype(np.int64), np.arange(n_row + 1)), shape=(n_row, n_column))

@@ -3,10 +3,15 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from datetime import date
 from typing import Literal
 
 ReferenceKind = Literal["load", "bus", "weights"]
 SusceptanceKind = Literal["reactance", "impedance"]
+PostedShape = Literal["long", "wide"]
+PostedClock = Literal["start", "hour_ending"]
+DayCount = Literal["calendar", "business"]
+DeadlineStart = Literal["interval", "published"]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -51,11 +56,48 @@ class PostedFormat:
         Own column name by contract column name.
     congestion_sign, shadow_price_sign
         -1 where the operator publishes with the opposite sign.
+    shape
+        ``"long"``: one row per interval and node; ``"wide"``: one column per node, or one column per hour.
+    clock
+        ``"start"``: times are the start of the interval; ``"hour_ending"``: its end.
+    local
+        Times are local clock time of the scenario's zone, without an offset.
     """
 
     columns: dict[str, str] = field(default_factory=dict)
     congestion_sign: int = 1
     shadow_price_sign: int = 1
+    shape: PostedShape = "long"
+    clock: PostedClock = "start"
+    local: bool = False
+
+
+@dataclass(frozen=True, kw_only=True)
+class Settlement:
+    """The user's own rules for disputes; no operator's rule is built in.
+
+    Attributes
+    ----------
+    materiality
+        Amount below which a claim is not worth making [currency].
+    deadline_days
+        Days in which a dispute may be raised; ``None``: no deadline is known.
+    counted
+        ``"calendar"`` days, or ``"business"`` days: Monday to Friday without ``holidays``.
+    counted_from
+        Key ``from``: the day of the ``"interval"``, or the day on which the price was ``"published"``.
+    holidays
+        Days that are no business days.
+    label
+        What the rule is called, for the exhibit.
+    """
+
+    materiality: float = 0.0
+    deadline_days: int | None = None
+    counted: DayCount = "calendar"
+    counted_from: DeadlineStart = "interval"
+    holidays: tuple[date, ...] = ()
+    label: str = ""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -79,7 +121,7 @@ class ScenarioSettings:
     dc: DcConvention = field(default_factory=DcConvention)
     penalties: Penalties = field(default_factory=Penalties)
     posted: PostedFormat = field(default_factory=PostedFormat)
-    dispute_rules: tuple[dict[str, object], ...] = ()
+    settlement: Settlement = field(default_factory=Settlement)
 
     @property
     def hours(self) -> float:
