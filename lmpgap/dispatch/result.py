@@ -208,13 +208,14 @@ class FrozenFactors:
         [-].
     loss_distribution : (n_bus,)
         Share of the total loss withdrawn at each bus; sums to one [-].
-    energy_multiplier : float
-        Multiplier of the system balance: rise of cost per unit of load where the factor is 1 [$/h per pu].
+    energy_multiplier : (n_bus,)
+        Multiplier of the system balance of the bus's island: rise of cost per unit of load where the factor is 1
+        [$/h per pu].
     """
 
     delivery_factor: FloatArray
     loss_distribution: FloatArray
-    energy_multiplier: float
+    energy_multiplier: FloatArray
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -302,8 +303,8 @@ class DispatchResult:
         angles, and its price needs an AC check before it is used.
     cone_slack : float
         Largest slack of a relaxed cone [pu]; zero where there is none.
-    loop_angle : float
-        Largest angle sum around a loop of the relaxed products [rad]; zero where angles are variables.
+    loop_angle_deg : float
+        Largest angle sum around a loop of the relaxed products [deg]; zero where angles are variables.
     loss_slack_open : bool
         True when a relaxed loss had to be replaced by frozen factors.
     frozen : FrozenFactors or None
@@ -333,7 +334,7 @@ class DispatchResult:
     fictitious_loss: float = 0.0
     relaxed: bool = False
     cone_slack: float = 0.0
-    loop_angle: float = 0.0
+    loop_angle_deg: float = 0.0
     loss_slack_open: bool = False
     frozen: FrozenFactors | None = None
     stationarity: StationaritySystem | None = None

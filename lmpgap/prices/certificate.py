@@ -130,7 +130,7 @@ def certify(
         losses = losses_mw(network, inputs, result)
         faults += _residual_faults(network, result, price_residual, marginal_error, tolerances)
     cost_gap = _cost_gap(result, ac)
-    loop_angle_deg = float(np.rad2deg(result.loop_angle)) if result.relaxed else float("nan")
+    loop_angle_deg = result.loop_angle_deg if result.relaxed else float("nan")
 
     if faults:
         verdict, reasons = UNCERTIFIED, tuple(faults)

@@ -22,10 +22,9 @@ number per island. Their difference, the price residual, is therefore a real che
 
 Notes
 -----
-The split into energy, loss and congestion parts is the textbook one: "Spot Pricing of Electricity" (1988),
-chapter 7, and "LMP Implementations", IEEE Trans. Power Systems 19(4), 2004 for the independence of the total
-from the reference. The same stationarity holds pair by pair in the cone relaxation, slack cones included,
-because turning one product W leaves |W| and so every cone alone.
+For the split on a reference and the independence of the total from it: "Marginal Loss Modeling in LMP Calculation",
+IEEE Trans. Power Systems 19(2), 2004. The same stationarity holds pair by pair in the cone relaxation, slack cones
+included, because turning one product W leaves |W| and so every cone alone.
 """
 
 from __future__ import annotations
@@ -86,7 +85,8 @@ class PriceSplit:
     weights : (n_bus,)
         The reference in force; sums to one in every live island [-].
     keys : (n_key,)
-        Constraints with a shadow price.
+        Constraints with a shadow price that bind flows or angles; voltage and reactive limits show in the reactive
+        component.
     unit : (n_key,)
         Unit of each constraint's limit.
     shadow_price : (n_key,)
@@ -185,7 +185,9 @@ def split_prices(
     multiplier_price = multiplier_to_price(result.multipliers.active, network.base_mva)
     reactive_price = multiplier_to_price(result.multipliers.reactive, network.base_mva)
     keyed = merge_by_key(result.constraints)
-    keep = np.flatnonzero(keyed.shadow_price > tolerances.shadow_price)
+    # Voltage and reactive limits do not turn with the angles: they act through the reactive prices.
+    turns = np.diff(keyed.angle_gain.indptr) > 0
+    keep = np.flatnonzero(turns & (keyed.shadow_price > tolerances.shadow_price))
     reference = island_weights(weights, island, live)
     if not live.any():
         return _nothing(network, island, reference, multiplier_price, reactive_price)
@@ -209,7 +211,7 @@ def split_prices(
         )
         shift_factor, reactive = distribution.move(shift_factor), distribution.move(reactive)
         alpha = reactive - shift_factor @ shadow_price
-        system = multiplier_to_price(np.array(result.frozen.energy_multiplier), network.base_mva)
+        system = multiplier_to_price(np.asarray(result.frozen.energy_multiplier), network.base_mva)
         energy = reducer.mean(np.where(live, system * result.frozen.delivery_factor + alpha, 0.0))
 
     dead = np.where(live, 1.0, np.nan)

@@ -6,7 +6,7 @@ alone. What does: the AC power flow at the relaxed dispatch against every limit 
 gap between the relaxed cost and the cost of the AC dispatch.
 
 For the relaxation itself: "Branch Flow Model: Relaxations and Convexification", IEEE Trans. Power Systems 28(3),
-2013, where closing angles is the condition of exactness on meshed networks (part I, theorem 2).
+2013, where the closing of angles around loops is what a meshed network asks of an exact relaxation.
 """
 
 from __future__ import annotations

@@ -390,7 +390,7 @@ def test_frozen_factors():
     right[0] = 0.0
     lam = 25.0 * network.base_mva
     active = lam * factors + np.linalg.solve(system, right)
-    frozen = FrozenFactors(delivery_factor=factors, loss_distribution=share, energy_multiplier=lam)
+    frozen = FrozenFactors(delivery_factor=factors, loss_distribution=share, energy_multiplier=np.full(n, lam))
     result = replace(result, constraints=rows, frozen=frozen, multipliers=replace(result.multipliers, active=active))
     split = split_prices(network, inputs.branch_in_service, result, inputs.load_p)
     assert split.price_residual < 1e-9
@@ -399,7 +399,7 @@ def test_frozen_factors():
     np.testing.assert_allclose(split.energy, weights @ split.multiplier_price)
     assert np.abs(split.loss).max() > 0.1
     # A wrong multiplier of the system balance does not go unseen: it is not borrowed from the prices.
-    wrong = replace(result, frozen=replace(frozen, energy_multiplier=1.01 * lam))
+    wrong = replace(result, frozen=replace(frozen, energy_multiplier=np.full(n, 1.01 * lam)))
     assert split_prices(network, inputs.branch_in_service, wrong, inputs.load_p).price_residual > 0.1
 
 
