@@ -12,14 +12,16 @@ import numpy as np
 
 from lmpgap.dispatch.ac_violations import limit_violations, net_injection, resource_buses, resource_totals
 from lmpgap.dispatch.limits import FlowLimits
-from lmpgap.dispatch.power_flow import solve_power_flow
+from lmpgap.dispatch.power_flow import nodal_mismatch, solve_power_flow
 from lmpgap.dispatch.result import DispatchResult, constraint_name
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 
 
 @dataclass(frozen=True, kw_only=True)
 class AcCheck:
-    """Largest violations of an AC power flow at a relaxed dispatch; ``inf`` when it did not converge.
+    """Largest violations of an AC power flow at a relaxed dispatch.
+
+    When the power flow did not converge, everything that rests on it is ``inf``.
 
     Attributes
     ----------
@@ -29,7 +31,10 @@ class AcCheck:
     iterations : int
         Newton steps.
     mismatch_mw : float
-        Power that the dispatch leaves missing (or has too much of), summed over islands [MW].
+        Largest active power that the relaxed voltages and recovered angles leave unbalanced at a bus, before any
+        Newton step [MW].
+    missing_mw : float
+        Power that the dispatch lacks (or has too much of) at the power flow's solution, summed over islands [MW].
     overload : float
         Largest excess over a thermal, contingency or interface limit, relative to the limit [-].
     overloaded : str
@@ -48,6 +53,7 @@ class AcCheck:
     reason: str
     iterations: int
     mismatch_mw: float
+    missing_mw: float
     overload: float
     overloaded: str
     voltage_pu: float
@@ -75,24 +81,37 @@ def ac_check(network: Network, inputs: IntervalInputs, result: DispatchResult, f
     """
     active, reactive = net_injection(network, inputs, result)
     magnitude = np.sqrt(np.where(np.isfinite(result.point.w) & (result.point.w > 0), result.point.w, 1.0))
+    angle = np.nan_to_num(result.point.angle)
+    unbalanced, _ = nodal_mismatch(
+        network,
+        inputs.branch_in_service,
+        magnitude=magnitude,
+        angle=angle,
+        p_injection=active,
+        q_injection=reactive,
+    )
+    holds = resource_buses(network, inputs)
     flow = solve_power_flow(
         network,
         inputs.branch_in_service,
         p_injection=active,
         q_injection=reactive,
         v_setpoint=magnitude,
-        holds_voltage=resource_buses(network, inputs),
+        holds_voltage=holds,
         slack_share=resource_totals(network, inputs, np.maximum(inputs.p_max, 0.0)),
         magnitude_start=magnitude,
-        angle_start=np.nan_to_num(result.point.angle),
+        angle_start=angle,
     )
+    base = network.base_mva
+    mismatch_mw = base * _largest(np.where(flow.dead, 0.0, unbalanced))
     if not flow.converged:
         endless = float("inf")
         return AcCheck(
             converged=False,
             reason=flow.reason,
             iterations=flow.iterations,
-            mismatch_mw=endless,
+            mismatch_mw=mismatch_mw,
+            missing_mw=endless,
             overload=endless,
             overloaded="",
             voltage_pu=endless,
@@ -101,7 +120,6 @@ def ac_check(network: Network, inputs: IntervalInputs, result: DispatchResult, f
             active_mw=endless,
         )
     found = limit_violations(network, inputs, flow_limits, flow, result.p, room=result)
-    base = network.base_mva
     thermal, beyond = _relative(found.thermal, network.normal_rating), _relative(found.flow, flow_limits.limit)
     overload, name = 0.0, ""
     if _largest(thermal) > 0:
@@ -119,7 +137,8 @@ def ac_check(network: Network, inputs: IntervalInputs, result: DispatchResult, f
         converged=True,
         reason="",
         iterations=flow.iterations,
-        mismatch_mw=float(np.sum(np.abs(flow.slack))) * base,
+        mismatch_mw=mismatch_mw,
+        missing_mw=float(np.sum(np.abs(flow.slack))) * base,
         overload=overload,
         overloaded=name,
         voltage_pu=_largest(found.voltage),

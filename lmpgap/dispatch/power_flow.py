@@ -170,6 +170,26 @@ def solve_power_flow(
     )
 
 
+def nodal_mismatch(
+    network: Network,
+    branch_in_service: BoolArray,
+    *,
+    magnitude: FloatArray,
+    angle: FloatArray,
+    p_injection: FloatArray,
+    q_injection: FloatArray,
+) -> tuple[FloatArray, FloatArray]:
+    """Return what given voltages leave unbalanced at each bus, active and reactive, each (n_bus,) [pu].
+
+    Positive where the network takes more than is injected. This is the first look at voltages that come from
+    elsewhere, e.g. from a relaxation; a power flow then says where they would settle.
+    """
+    everywhere = np.ones(network.n_bus, dtype=bool)
+    system = _System.of(network, branch_in_service, everywhere, np.zeros(network.n_bus))
+    p_network, q_network = system.injections(_State(magnitude, angle, np.zeros(system.n_island)))
+    return p_network - p_injection, q_network - q_injection
+
+
 @dataclass(frozen=True)
 class _State:
     magnitude: FloatArray
