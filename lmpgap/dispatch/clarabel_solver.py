@@ -35,6 +35,9 @@ STATUS: dict[str, SolveStatus] = {
 }
 """Status of every Clarabel outcome that is understood; any other means FAILED."""
 
+_SETTLED = (SolveStatus.OPTIMAL, SolveStatus.INFEASIBLE, SolveStatus.UNBOUNDED)
+"""Outcomes after which no further attempt is made."""
+
 FIXED_WIDTH = 1e-9
 """Bounds closer than this [pu] leave no interior; the variable is held at its lower bound."""
 
@@ -112,23 +115,18 @@ def solve_conic(program: ConicProgram, tolerances: Tolerances) -> tuple[ConicSol
             (),
         )
     stacked = _stack(program, fixed)
-    best: ConicSolution | None = None
-    best_error, seconds, tried = np.inf, 0.0, []
+    answers: list[ConicSolution] = []
     for attempt in _ATTEMPTS:
-        solution = _solve_once(program, fixed, stacked, tolerances, attempt)
-        seconds += solution.seconds
-        tried.append(attempt.label)
-        if solution.status in (SolveStatus.OPTIMAL, SolveStatus.INFEASIBLE, SolveStatus.UNBOUNDED):
-            best = solution
+        answers.append(_solve_once(program, fixed, stacked, tolerances, attempt))
+        if answers[-1].status in _SETTLED:
             break
-        error = _error(program, solution)
-        if best is None or error < best_error:
-            best, best_error = solution, error
-    assert best is not None
+    settled = answers[-1].status in _SETTLED
+    best = answers[-1] if settled else min(answers, key=lambda answer: _error(program, answer))
     notes: tuple[str, ...] = ()
-    if len(tried) > 1:
-        notes = (f"{name} was asked again: {', then '.join(tried)}; taken: {best.message}",)
-    return replace(best, seconds=seconds), notes
+    if len(answers) > 1:
+        tried = ", then ".join(attempt.label for attempt in _ATTEMPTS[: len(answers)])
+        notes = (f"{name} was asked {len(answers)} times: {tried}; taken: {best.message}",)
+    return replace(best, seconds=sum(answer.seconds for answer in answers)), notes
 
 
 def _error(program: ConicProgram, solution: ConicSolution) -> float:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import time
 from abc import ABC, abstractmethod
 from dataclasses import dataclass
-from typing import Any, ClassVar
+from typing import Any
 
 import numpy as np
 
@@ -60,7 +60,7 @@ class ConvexDispatch(ABC):
     A result depends on the interval alone: nothing is carried from one solve to the next but matrices.
     """
 
-    name: ClassVar[str]
+    name: str
 
     def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
         self.network = network

@@ -10,8 +10,6 @@ with no loss here. "DC Power Flow Revisited", IEEE Transactions on Power Systems
 
 from __future__ import annotations
 
-from typing import ClassVar
-
 import numpy as np
 from scipy import sparse
 
@@ -38,7 +36,7 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Netwo
 class DcDispatch(ConvexDispatch):
     """Lossless linear dispatch of one topology, see `lmpgap.dispatch.formulation.Formulation`."""
 
-    name: ClassVar[str] = "dc"
+    name: str = "dc"
 
     def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
         super().__init__(network, branch_in_service, options)
@@ -59,6 +57,10 @@ class DcDispatch(ConvexDispatch):
         """Return the loss that the model carries beyond the physical one [pu]."""
         return 0.0
 
+    def _balance(self, builder: ProgramBuilder, live: LiveNetwork, injection: Affine, leaving: Affine) -> None:
+        """Add the balance of every bus."""
+        builder.equality("balance", injection - leaving)
+
     def _extend(self, builder: ProgramBuilder, live: LiveNetwork, inputs: IntervalInputs) -> None:
         """Add what a derived formulation needs besides."""
 
@@ -74,7 +76,7 @@ class DcDispatch(ConvexDispatch):
         p_from, p_to = flow + loss.scaled(0.5), loss.scaled(0.5) - flow
 
         leaving = p_from.mapped(live.from_incidence) + p_to.mapped(live.to_incidence)
-        builder.equality("balance", injection - leaving)
+        self._balance(builder, live, injection, leaving)
 
         b, shift = self.linear.susceptance[live.branch], self.linear.shift[live.branch]
         scale = 1.0 / np.maximum(1.0, np.abs(b))  # keeps branches of small impedance in proportion

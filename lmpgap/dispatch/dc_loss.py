@@ -16,7 +16,6 @@ from __future__ import annotations
 
 import time
 from dataclasses import replace
-from typing import ClassVar
 
 import numpy as np
 
@@ -31,7 +30,7 @@ from lmpgap.scenario.network import FloatArray, IntervalInputs, incidence
 class DcLossDispatch(DcDispatch):
     """Linear dispatch with losses of one topology, see `lmpgap.dispatch.formulation.Formulation`."""
 
-    name: ClassVar[str] = "dc-loss"
+    name: str = "dc-loss"
 
     def solve(
         self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None

@@ -118,7 +118,7 @@ def _run(highs: highspy.Highs) -> float:
 
 def _model(program: ConicProgram, *, presolve: bool) -> highspy.Highs:
     """Return a HiGHS instance that holds the program."""
-    highs = highspy.Highs()
+    highs = highspy.Highs()  # type: ignore[no-untyped-call]
     highs.setOptionValue("output_flag", False)
     highs.setOptionValue("threads", 1)
     highs.setOptionValue("parallel", "off")

@@ -92,6 +92,8 @@ class ProgramTemplate:
         With the values given while building.
     variables, equalities, inequalities, cones
         Slice of each named block; ``cones`` are row slices of the cone block.
+    equality_constant, inequality_constant
+        Constants of the rows' left sides, which are subtracted from every right side.
     """
 
     program: ConicProgram
@@ -99,6 +101,8 @@ class ProgramTemplate:
     equalities: dict[str, slice]
     inequalities: dict[str, slice]
     cones: dict[str, slice]
+    equality_constant: FloatArray
+    inequality_constant: FloatArray
 
     def fill(
         self,
@@ -111,7 +115,10 @@ class ProgramTemplate:
         inequality_rhs: Values | None = None,
         constant: float = 0.0,
     ) -> ConicProgram:
-        """Return the program of one interval: the named blocks exchanged, everything else as built."""
+        """Return the program of one interval: the named blocks exchanged, everything else as built.
+
+        Right-hand sides are those of the rows as they were written; constants on their left are taken care of.
+        """
         program = self.program
         return replace(
             program,
@@ -120,8 +127,10 @@ class ProgramTemplate:
             quadratic=_exchanged(program.quadratic, self.variables, quadratic),
             lower=_exchanged(program.lower, self.variables, lower),
             upper=_exchanged(program.upper, self.variables, upper),
-            equality_rhs=_exchanged(program.equality_rhs, self.equalities, equality_rhs),
-            inequality_rhs=_exchanged(program.inequality_rhs, self.inequalities, inequality_rhs),
+            equality_rhs=_exchanged(program.equality_rhs, self.equalities, equality_rhs, self.equality_constant),
+            inequality_rhs=_exchanged(
+                program.inequality_rhs, self.inequalities, inequality_rhs, self.inequality_constant
+            ),
         )
 
 
@@ -191,6 +200,8 @@ class ProgramBuilder:
             equalities=equalities,
             inequalities=inequalities,
             cones=cones,
+            equality_constant=_constants(self._equalities),
+            inequality_constant=_constants(self._inequalities),
         )
 
     def _matrix(self, expression: Affine) -> sparse.coo_array:
@@ -239,14 +250,20 @@ class ProgramBuilder:
         return matrix, np.concatenate(constants), np.concatenate(sizes), slices
 
 
-def _exchanged(base: FloatArray, slices: dict[str, slice], values: Values | None) -> FloatArray:
-    """Return a copy of ``base`` with the named blocks exchanged."""
+def _exchanged(
+    base: FloatArray, slices: dict[str, slice], values: Values | None, constant: FloatArray | None = None
+) -> FloatArray:
+    """Return a copy of ``base`` with the named blocks exchanged, less the constants where there are any."""
     if not values:
         return base
     result = base.copy()
     for name, value in values.items():
-        result[slices[name]] = value
+        result[slices[name]] = value if constant is None else value - constant[slices[name]]
     return result
+
+
+def _constants(blocks: dict[str, tuple[Affine, FloatArray]]) -> FloatArray:
+    return np.concatenate([np.zeros(0), *(left.constant for left, _ in blocks.values())])
 
 
 def _without_zeros(matrix: sparse.csr_array) -> sparse.csr_array:

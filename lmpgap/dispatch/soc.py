@@ -20,7 +20,6 @@ What is relaxed: the cone may be slack, and angles need not close around loops.
 from __future__ import annotations
 
 from dataclasses import replace
-from typing import ClassVar
 
 import numpy as np
 
@@ -49,7 +48,7 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInp
 class SocDispatch(ConvexDispatch):
     """Second-order cone dispatch of one topology, see `lmpgap.dispatch.formulation.Formulation`."""
 
-    name: ClassVar[str] = "soc"
+    name: str = "soc"
 
     def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
         super().__init__(network, branch_in_service, options)
