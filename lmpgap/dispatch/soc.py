@@ -161,7 +161,7 @@ class SocDispatch(ConvexDispatch):
         live, template, network = model.live, model.template, self.network
         value = {name: e.value(template, solution.x) for name, e in model.expressions.items()}
         w = solution.x[template.variables["w"]]
-        point = self._point(live, value, w)
+        point, loop_angle_deg = self._point(live, value, w)
         multipliers = BalanceMultipliers(
             active=live.to_buses(solution.equality_dual[template.equalities["balance"]], np.nan),
             reactive=live.to_buses(solution.equality_dual[template.equalities["reactive balance"]], np.nan),
@@ -175,21 +175,30 @@ class SocDispatch(ConvexDispatch):
             multipliers=multipliers,
             constraints=soc_constraints(network, model, program, solution, inputs, flow_limits, point, self.options),
             fictitious_loss=float(np.sum(r * (value["current"] / z - physical))),
+            changes={
+                "relaxed": True,
+                "cone_slack": float(np.max((value["current"] / z - physical) * value["u"], initial=0.0)),
+                "loop_angle_deg": loop_angle_deg,
+            },
         )
 
-    def _point(self, live: LiveNetwork, value: dict[str, FloatArray], w: FloatArray) -> OperatingPoint:
-        """Return the operating point; flows are the program's own, derivatives those of its products."""
+    def _point(self, live: LiveNetwork, value: dict[str, FloatArray], w: FloatArray) -> tuple[OperatingPoint, float]:
+        """Return the operating point and its largest loop angle [deg].
+
+        Flows are the program's own, derivatives those of its products.
+        """
         network = self.network
         c, s = live.to_branches(value["c"]), live.to_branches(value["s"])
-        angle, _ = recover_angles(network, self.branch_in_service, c, s)
+        angle, loop_angle_deg = recover_angles(network, self.branch_in_service, c, s)
         point = operating_point(network, self._branches, live.to_buses(w, 0.0), c, s, angle)
         # Rebuilt from w, c and s the flows would carry the solver's residual times the admittance.
-        return replace(
+        own = replace(
             point,
             w=live.to_buses(w, np.nan),
             angle=live.to_buses(angle[live.bus], np.nan),
             **{name: live.to_branches(value[name]) for name in ("p_from", "q_from", "p_to", "q_to")},
         )
+        return own, loop_angle_deg
 
 
 def _rotated(network: Network, live: LiveNetwork, c: Affine, s: Affine) -> tuple[Affine, Affine]:

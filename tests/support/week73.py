@@ -125,6 +125,8 @@ def _offers(units: pd.DataFrame) -> pd.DataFrame:
             price, segment = max(price, round(cost + float(unit["VOM"] or 0.0), 4)), segment + 1
             rows.append((unit["GEN UID"], segment, start, end, price))
             start = end
+        if segment == 0:
+            rows.append((unit["GEN UID"], 1, 0.0, float(unit["PMax MW"]), 0.0))
     return pd.DataFrame(rows, columns=["resource", "segment", "from_mw", "to_mw", "price"])
 
 
