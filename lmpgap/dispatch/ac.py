@@ -25,16 +25,16 @@ from lmpgap.dispatch.ac_model import AcProgram, AcShape
 from lmpgap.dispatch.ac_result import (
     AcSolution,
     balance_multipliers,
-    constraint_rows,
     outputs_of,
     point_of,
     residuals,
     resource_cost,
     stationarity_system,
 )
-from lmpgap.dispatch.energised import energised_buses
+from lmpgap.dispatch.ac_rows import ac_constraints
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.live import bus_list, live_buses
 from lmpgap.dispatch.result import DispatchResult, SolveStatus, no_solution
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
@@ -114,6 +114,7 @@ class AcDispatch:
         self._network = network
         self._branch_in_service = np.asarray(branch_in_service, dtype=bool)
         self._options = options
+        self._island = network.islands(self._branch_in_service)
         self._programs: OrderedDict[object, AcProgram] = OrderedDict()
 
     def solve(
@@ -164,9 +165,9 @@ class AcDispatch:
             )
         program = self._program(inputs, flow_limits, movement is not None)
         vectors = interval_vectors(program, inputs, flow_limits, self._options, movement)
-        if vectors.contradictions() or program.layout.bus.size == 0:
-            reason = "a lower limit lies above its upper limit" if program.layout.bus.size else "no bus is energised"
-            return self._without_solution(inputs, SolveStatus.INFEASIBLE, reason, 0.0, began, ())
+        impossible = self._impossible(program, inputs, vectors)
+        if impossible:
+            return self._without_solution(inputs, SolveStatus.INFEASIBLE, impossible, 0.0, began, ())
         given = start if start is not None and start.status.has_solution else None
         best: tuple[SolveStatus, AcSolution] | None = None
         notes: list[str] = []
@@ -183,7 +184,7 @@ class AcDispatch:
             before = time.perf_counter()
             status, words, solution = _run(program, vectors, x, attempt)
             seconds += time.perf_counter() - before
-            if status.has_solution:
+            if solution is not None:
                 best = status, solution
             if status is SolveStatus.LOCALLY_OPTIMAL:
                 break
@@ -193,9 +194,19 @@ class AcDispatch:
         status, solution = best
         return self._result(program, vectors, inputs, flow_limits, status, solution, seconds, began, notes)
 
+    def _impossible(self, program: AcProgram, inputs: IntervalInputs, vectors: AcVectors) -> str:
+        """Return what rules out any dispatch before a solver sees it, in words; empty if nothing does."""
+        dead = program.layout.live.dead()
+        stranded = dead[inputs.load_p[dead] != 0.0]
+        if stranded.size and self._options.penalties.power_balance is None:
+            return f"no resource in service is connected to the load at {bus_list(self._network, stranded)}"
+        if program.layout.live.n_bus == 0:
+            return "no resource is in service anywhere"
+        return "a lower limit lies above its upper limit" if vectors.contradictions() else ""
+
     def _program(self, inputs: IntervalInputs, flow_limits: FlowLimits, movement: bool) -> AcProgram:
         shape = AcShape(
-            live=energised_buses(self._network, inputs),
+            live=live_buses(self._network, self._island, inputs),
             branch_in_service=self._branch_in_service,
             segment_resource=inputs.segments.resource,
             bid_bus=inputs.bids.bus,
@@ -244,22 +255,22 @@ class AcDispatch:
         began: float,
         notes: list[str],
     ) -> DispatchResult:
-        network, layout, options = self._network, program.layout, self._options
-        x, at = solution.x, layout.variables
+        network, live, options = self._network, program.layout.live, self._options
+        base, penalties, dead = network.base_mva, options.penalties, live.dead()
+        x, at = solution.x, program.layout.variables
         point = point_of(program, x)
         cost = resource_cost(program, inputs, x)
         unserved, surplus = np.zeros(network.n_bus), np.zeros(network.n_bus)
-        objective = float(np.sum(cost) - network.base_mva * (inputs.bids.price @ x[at["bid"]]))
-        if options.penalties.power_balance is not None:
-            unserved[layout.bus], surplus[layout.bus] = x[at["unserved"]], x[at["surplus"]]
-            objective += options.penalties.power_balance * network.base_mva * float(np.sum(unserved + surplus))
-        if options.penalties.transmission is not None:
-            slack = float(np.sum(x[at["overload"]]) + np.sum(x[at["overflow"]]))
-            objective += options.penalties.transmission * network.base_mva * slack
-        dead = layout.position < 0
-        if np.any(dead):
-            names = ", ".join(network.buses[i] for i in np.flatnonzero(dead)[:5])
-            notes = [*notes, f"{np.count_nonzero(dead)} buses without a resource in their island are dead: {names}"]
+        objective = float(np.sum(cost) - base * (inputs.bids.price @ x[at["bid"]]))
+        if penalties.power_balance is not None:
+            unserved[live.bus], surplus[live.bus] = x[at["unserved"]], x[at["surplus"]]
+            unserved[dead], surplus[dead] = np.maximum(inputs.load_p[dead], 0.0), np.maximum(-inputs.load_p[dead], 0.0)
+            objective += penalties.power_balance * base * float(np.sum(unserved + surplus))
+        if penalties.transmission is not None:
+            excess = float(np.sum(x[at["excess"]]) + np.sum(x[at["flow_excess"]]))
+            objective += penalties.transmission * base * excess
+        if dead.size:
+            notes = [*notes, f"no price at {bus_list(network, dead)}: no resource in service is connected"]
         return DispatchResult(
             formulation=self.name,
             status=status,
@@ -276,7 +287,7 @@ class AcDispatch:
             surplus=surplus,
             point=point,
             multipliers=balance_multipliers(program, solution),
-            constraints=constraint_rows(program, inputs, flow_limits, solution, point, options),
+            constraints=ac_constraints(program, vectors, inputs, flow_limits, solution, point, options),
             residuals=residuals(program, vectors, solution),
             stationarity=(
                 stationarity_system(program, vectors, solution, options) if options.keep_stationarity else None
@@ -287,24 +298,29 @@ class AcDispatch:
 
 def _run(
     program: AcProgram, vectors: AcVectors, x: FloatArray, attempt: Attempt
-) -> tuple[SolveStatus, str, AcSolution]:
+) -> tuple[SolveStatus, str, AcSolution | None]:
+    """Return the status, the solver's words, and the solution where there is one."""
     solver = program.solver(attempt.settings)
-    answer = solver(
-        x0=x,
-        p=vectors.parameter,
-        lbx=vectors.lower,
-        ubx=np.maximum(vectors.lower, vectors.upper),
-        lbg=vectors.row_lower,
-        ubg=np.maximum(vectors.row_lower, vectors.row_upper),
-    )
+    try:
+        answer = solver(
+            x0=x,
+            p=vectors.parameter,
+            lbx=vectors.lower,
+            ubx=np.maximum(vectors.lower, vectors.upper),
+            lbg=vectors.row_lower,
+            ubg=np.maximum(vectors.row_lower, vectors.row_upper),
+        )
+    except RuntimeError as failure:
+        # casadi turns whatever its plugin throws into this; one interval must not end a run.
+        return SolveStatus.FAILED, str(failure).strip().splitlines()[-1], None
     words = str(solver.stats()["return_status"])
-    scale = program.objective_scale
-    solution = AcSolution(
-        x=np.asarray(answer["x"], dtype=float).ravel(),
-        bound_multiplier=np.asarray(answer["lam_x"], dtype=float).ravel() / scale,
-        row_multiplier=np.asarray(answer["lam_g"], dtype=float).ravel() / scale,
-    )
     status = STATUS.get(words, SolveStatus.FAILED)
-    if status.has_solution and not np.all(np.isfinite(solution.x)):
+    vector = {name: np.asarray(answer[name], dtype=float).ravel() for name in ("x", "lam_x", "lam_g")}
+    if status.has_solution and not all(np.all(np.isfinite(values)) for values in vector.values()):
         status = SolveStatus.FAILED
-    return status, words.replace("_", " ").lower(), solution
+    solution = AcSolution(
+        x=vector["x"],
+        bound_multiplier=vector["lam_x"] / program.objective_scale,
+        row_multiplier=vector["lam_g"] / program.objective_scale,
+    )
+    return status, words.replace("_", " ").lower(), solution if status.has_solution else None

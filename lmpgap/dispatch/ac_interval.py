@@ -57,30 +57,32 @@ def interval_vectors(
 ) -> AcVectors:
     """Return the vectors of one interval for a program of its shape."""
     network, layout = program.network, program.layout
-    base = network.base_mva
+    base, live = network.base_mva, layout.live
     lower, upper = np.zeros(layout.n_var), np.full(layout.n_var, np.inf)
     at = layout.variables
     lower[at["angle"]] = -np.inf
-    lower[at["angle"]][layout.reference] = 0.0
-    upper[at["angle"]][layout.reference] = 0.0
-    lower[at["magnitude"]], upper[at["magnitude"]] = network.v_min[layout.bus], network.v_max[layout.bus]
+    lower[at["angle"]][live.references()] = 0.0
+    upper[at["angle"]][live.references()] = 0.0
+    lower[at["magnitude"]], upper[at["magnitude"]] = network.v_min[live.bus], network.v_max[live.bus]
     upper[at["segment"]] = inputs.segments.width
-    on = inputs.resource_in_service
+    on = inputs.resource_in_service & (live.bus_position[network.resource_bus] >= 0)
     lower[at["q"]] = np.where(on, network.q_min, 0.0)
     upper[at["q"]] = np.where(on, network.q_max, 0.0)
-    bid_live = layout.position[inputs.bids.bus] >= 0
+    bid_live = live.bus_position[inputs.bids.bus] >= 0
     upper[at["bid"]] = np.where(bid_live, inputs.bids.width, 0.0)
     if options.penalties.power_balance is not None:
-        upper[at["unserved"]] = np.maximum(inputs.load_p[layout.bus], 0.0)
+        upper[at["unserved"]] = np.maximum(inputs.load_p[live.bus], 0.0)
 
     row_lower, row_upper = np.full(layout.n_row, -np.inf), np.zeros(layout.n_row)
     rows = layout.rows
     minimum = network.bus_to_resource() @ inputs.p_min
     for block, amount in (("active", inputs.load_p - minimum), ("reactive", inputs.load_q)):
-        row_lower[rows[block]] = row_upper[rows[block]] = amount[layout.bus]
-    row_upper[rows["thermal_from"]] = row_upper[rows["thermal_to"]] = network.normal_rating[layout.rated] ** 2
-    row_lower[rows["angle"]] = network.angle_min[layout.angle_limited]
-    row_upper[rows["angle"]] = network.angle_max[layout.angle_limited]
+        row_lower[rows[block]] = row_upper[rows[block]] = amount[live.bus]
+    row_upper[rows["thermal_from"]] = row_upper[rows["thermal_to"]] = (
+        network.normal_rating[live.branch[layout.rated]] ** 2
+    )
+    limited = live.branch[layout.angle_limited]
+    row_lower[rows["angle"]], row_upper[rows["angle"]] = network.angle_min[limited], network.angle_max[limited]
     row_upper[rows["flow"]] = flow_limits.limit
 
     parameter = np.zeros(layout.n_parameter)
@@ -106,7 +108,7 @@ def flat_start(program: AcProgram, vectors: AcVectors) -> FloatArray:
     finite = np.isfinite(vectors.lower) & np.isfinite(vectors.upper)
     x[finite] = 0.5 * (vectors.lower[finite] + vectors.upper[finite])
     x[layout.variables["magnitude"]] = 1.0
-    for block in ("unserved", "surplus", "overload", "overflow"):
+    for block in ("unserved", "surplus", "excess", "flow_excess", "up", "down"):
         x[layout.variables[block]] = 0.0
     return np.clip(x, vectors.lower, vectors.upper)
 
@@ -116,21 +118,20 @@ def start_from(program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, r
 
     Its angles are turned island by island so that the references stand at zero.
     """
-    network, layout = program.network, program.layout
+    layout, live = program.layout, program.layout.live
     at = layout.variables
     x = flat_start(program, vectors)
-    island = network.islands(program.shape.branch_in_service)[layout.bus]
-    angle = result.point.angle[layout.bus]
-    turn = np.zeros(int(island.max(initial=-1)) + 1)
-    turn[island[layout.reference]] = angle[layout.reference]
-    x[at["angle"]] = angle - turn[island]
-    x[at["magnitude"]] = np.sqrt(result.point.w[layout.bus])
+    angle = result.point.angle[live.bus]
+    turn = np.zeros(int(live.island.max(initial=-1)) + 1)
+    turn[live.island[live.references()]] = angle[live.references()]
+    x[at["angle"]] = angle - turn[live.island]
+    x[at["magnitude"]] = np.sqrt(result.point.w[live.bus])
     x[at["segment"]] = fill_segments(inputs, result.p)
     x[at["q"]] = result.q
     x[at["bid"]] = result.bid_served
     if at["unserved"].stop > at["unserved"].start:
-        x[at["unserved"]] = result.unserved[layout.bus]
-        x[at["surplus"]] = result.surplus[layout.bus]
+        x[at["unserved"]] = result.unserved[live.bus]
+        x[at["surplus"]] = result.surplus[live.bus]
     return np.clip(np.where(np.isfinite(x), x, 0.0), vectors.lower, vectors.upper)
 
 

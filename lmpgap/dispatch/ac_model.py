@@ -26,6 +26,8 @@ from scipy import sparse
 
 from lmpgap.dispatch.branch_model import BranchModel, FlowCoefficients
 from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.live import LiveNetwork, live_network
+from lmpgap.dispatch.supply import placed, rated_branches
 from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, Network, incidence
 
 
@@ -80,29 +82,18 @@ class AcLayout:
     ----------
     variables, rows, parameters
         Slice by block name, in order.
-    bus : (n_live,)
-        Positions of the energised buses.
-    position : (n_bus,)
-        Place of each bus among the energised ones, -1 at a dead bus.
-    branch : (n_on,)
-        Positions of the branches in the program: in service, between energised buses.
-    rated : (n_rated,)
-        Positions of those with a finite rating.
-    angle_limited : (n_angle,)
-        Positions of those with a finite angle limit.
-    reference : (n_island,)
-        Place among the energised buses of each island's angle reference.
+    live
+        The buses and branches that take part.
+    rated, angle_limited : (n,)
+        Branches, counted among the live ones, with a finite rating or angle limit.
     """
 
     variables: dict[str, slice]
     rows: dict[str, slice]
     parameters: dict[str, slice]
-    bus: IntArray
-    position: IntArray
-    branch: IntArray
+    live: LiveNetwork
     rated: IntArray
     angle_limited: IntArray
-    reference: IntArray
 
     @property
     def n_var(self) -> int:
@@ -122,35 +113,32 @@ class AcLayout:
 
 def make_layout(network: Network, shape: AcShape, options: DispatchOptions) -> AcLayout:
     """Return where everything stands in the program of a shape."""
-    live = shape.live
-    bus = np.flatnonzero(live)
-    position = np.full(network.n_bus, -1, dtype=np.int64)
-    position[bus] = np.arange(bus.size)
-    branch = np.flatnonzero(shape.branch_in_service & live[network.from_bus] & live[network.to_bus])
-    rated = branch[np.isfinite(network.normal_rating[branch])]
-    limited = branch[np.isfinite(network.angle_min[branch]) | np.isfinite(network.angle_max[branch])]
-    _, first = np.unique(network.islands(shape.branch_in_service)[bus], return_index=True)
+    live = live_network(network, shape.branch_in_service, network.islands(shape.branch_in_service), shape.live)
+    rated = rated_branches(live)
+    angle_min, angle_max = network.angle_min[live.branch], network.angle_max[live.branch]
+    limited = np.flatnonzero(np.isfinite(angle_min) | np.isfinite(angle_max))
     n_segment, n_bid, n_flow = shape.segment_resource.size, shape.bid_bus.size, shape.flow_weights.shape[0]
     n_moved = network.n_resource if shape.movement else 0
-    soft_balance = bus.size if options.penalties.power_balance is not None else 0
+    soft_balance = live.n_bus if options.penalties.power_balance is not None else 0
     soft_flow = options.penalties.transmission is not None
     return AcLayout(
         variables=_slices(
-            angle=bus.size,
-            magnitude=bus.size,
+            angle=live.n_bus,
+            magnitude=live.n_bus,
             segment=n_segment,
             q=network.n_resource,
             bid=n_bid,
             unserved=soft_balance,
             surplus=soft_balance,
-            overload=rated.size if soft_flow else 0,
-            overflow=n_flow if soft_flow else 0,
+            # One excess per branch: both ends give way together, so their shadow prices add up to the penalty.
+            excess=rated.size if soft_flow else 0,
+            flow_excess=n_flow if soft_flow else 0,
             up=n_moved,
             down=n_moved,
         ),
         rows=_slices(
-            active=bus.size,
-            reactive=bus.size,
+            active=live.n_bus,
+            reactive=live.n_bus,
             thermal_from=rated.size,
             thermal_to=rated.size,
             angle=limited.size,
@@ -158,12 +146,9 @@ def make_layout(network: Network, shape: AcShape, options: DispatchOptions) -> A
             movement=n_moved,
         ),
         parameters=_slices(price=n_segment, slope=n_segment, bid_price=n_bid, movement_price=1),
-        bus=bus,
-        position=position,
-        branch=branch,
+        live=live,
         rated=rated,
         angle_limited=limited,
-        reference=first.astype(np.int64),
     )
 
 
@@ -196,9 +181,8 @@ class AcProgram:
         value = {name: x[place] for name, place in layout.variables.items()}
         price = {name: parameter[place] for name, place in layout.parameters.items()}
         model = BranchModel.of(network, self.shape.branch_in_service)
-        branch = layout.branch
-        start, end = layout.position[network.from_bus[branch]], layout.position[network.to_bus[branch]]
-        n_live = layout.bus.size
+        live = layout.live
+        branch, start, end = live.branch, live.from_bus, live.to_bus
         angle, magnitude = value["angle"], value["magnitude"]
         difference = _entries(angle, start) - _entries(angle, end)
         square = magnitude * magnitude
@@ -216,23 +200,22 @@ class AcProgram:
         p_from, q_from = flow(model.p_from, square_from), flow(model.q_from, square_from)
         p_to, q_to = flow(model.p_to, square_to), flow(model.q_to, square_to)
 
-        at_start, at_end = incidence(start, n_live).T, incidence(end, n_live).T
-        resource_at = _placed(layout.position[network.resource_bus], n_live)
-        bid_at = _placed(layout.position[self.shape.bid_bus], n_live)
+        resource_at = placed(live.bus_position[network.resource_bus], live.n_bus)
+        bid_at = placed(live.bus_position[self.shape.bid_bus], live.n_bus)
         of_resource = incidence(self.shape.segment_resource, network.n_resource).T
         above_minimum = _times(of_resource, value["segment"])
         active = (
             _times(resource_at, above_minimum)
             - _times(bid_at, value["bid"])
-            - casadi.DM(network.shunt_g[layout.bus]) * square
-            - _times(at_start, p_from)
-            - _times(at_end, p_to)
+            - casadi.DM(network.shunt_g[live.bus]) * square
+            - _times(live.from_incidence, p_from)
+            - _times(live.to_incidence, p_to)
         )
         reactive = (
             _times(resource_at, value["q"])
-            + casadi.DM(network.shunt_b[layout.bus]) * square
-            - _times(at_start, q_from)
-            - _times(at_end, q_to)
+            + casadi.DM(network.shunt_b[live.bus]) * square
+            - _times(live.from_incidence, q_from)
+            - _times(live.to_incidence, q_to)
         )
         base = network.base_mva
         segment = value["segment"]
@@ -242,24 +225,23 @@ class AcProgram:
             active += value["unserved"] - value["surplus"]
             cost += options.penalties.power_balance * base * casadi.sum1(value["unserved"] + value["surplus"])
 
-        rated = np.searchsorted(branch, layout.rated)
-        rating = casadi.DM(network.normal_rating[layout.rated])
+        rated = layout.rated
+        rating = casadi.DM(network.normal_rating[branch[rated]])
         thermal_from = _entries(p_from, rated) ** 2 + _entries(q_from, rated) ** 2
         thermal_to = _entries(p_to, rated) ** 2 + _entries(q_to, rated) ** 2
         flow_rows = _times(self.shape.flow_weights[:, branch], p_from)
         if options.penalties.transmission is not None:
             # (rating + slack)^2 less rating^2, so that the row's bound is rating^2 with and without a penalty.
-            eased = (2 * rating + value["overload"]) * value["overload"]
+            eased = (2 * rating + value["excess"]) * value["excess"]
             thermal_from, thermal_to = thermal_from - eased, thermal_to - eased
-            flow_rows -= value["overflow"]
-            slack = casadi.sum1(value["overload"]) + casadi.sum1(value["overflow"])
+            flow_rows -= value["flow_excess"]
+            slack = casadi.sum1(value["excess"]) + casadi.sum1(value["flow_excess"])
             cost += options.penalties.transmission * base * slack
         movement = above_minimum - value["up"] + value["down"] if self.shape.movement else casadi.SX(0, 1)
         if self.shape.movement:
             cost += price["movement_price"] * casadi.sum1(value["up"] + value["down"])
-        limited = np.searchsorted(branch, layout.angle_limited)
         rows = casadi.vertcat(
-            active, reactive, thermal_from, thermal_to, _entries(difference, limited), flow_rows, movement
+            active, reactive, thermal_from, thermal_to, _entries(difference, layout.angle_limited), flow_rows, movement
         )
         return {"x": x, "p": parameter, "f": self.objective_scale * cost, "g": casadi.densify(rows)}
 
@@ -318,12 +300,6 @@ def _slices(**sizes: int) -> dict[str, slice]:
 
 def _length(blocks: dict[str, slice]) -> int:
     return max((place.stop for place in blocks.values()), default=0)
-
-
-def _placed(position: IntArray, n_live: int) -> sparse.csr_array:
-    """Return (n_live, len(position)) with a one where an item stands at an energised bus."""
-    there = np.flatnonzero(position >= 0)
-    return sparse.csr_array((np.ones(there.size), (position[there], there)), shape=(n_live, position.size))
 
 
 def _entries(vector: Any, position: IntArray) -> Any:

@@ -7,7 +7,7 @@ multiplier. The MVA rows limit S^2; per unit of rating the multiplier is 2 (rati
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import sparse
@@ -16,15 +16,13 @@ from lmpgap.dispatch.ac_interval import AcVectors, segment_slope
 from lmpgap.dispatch.ac_model import AcProgram
 from lmpgap.dispatch.branch_model import BranchModel, operating_point, voltage_products
 from lmpgap.dispatch.formulation import DispatchOptions
-from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import (
     BalanceMultipliers,
-    ConstraintRows,
     OperatingPoint,
     SolverResiduals,
     StationaritySystem,
 )
-from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, incidence
+from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, incidence
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -71,17 +69,14 @@ def residuals(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> S
 
 
 def point_of(program: AcProgram, x: FloatArray) -> OperatingPoint:
-    """Return the operating point; dead buses have w = 0 and angle 0."""
-    network, layout = program.network, program.layout
-    magnitude, angle = np.zeros(network.n_bus), np.zeros(network.n_bus)
-    magnitude[layout.bus] = x[layout.variables["magnitude"]]
-    angle[layout.bus] = x[layout.variables["angle"]]
-    on = np.zeros(network.n_branch, dtype=bool)
-    on[layout.branch] = True
+    """Return the operating point; voltages are ``nan`` at dead buses, whose branches carry nothing."""
+    network, live, at = program.network, program.layout.live, program.layout.variables
+    magnitude, angle = live.to_buses(x[at["magnitude"]], 0.0), live.to_buses(x[at["angle"]], 0.0)
     c, s = voltage_products(network, magnitude, angle)
-    return operating_point(
-        network, BranchModel.of(network, on), magnitude**2, np.where(on, c, 0.0), np.where(on, s, 0.0), angle
-    )
+    c, s = live.to_branches(c[live.branch]), live.to_branches(s[live.branch])
+    model = BranchModel.of(network, program.shape.branch_in_service)
+    point = operating_point(network, model, magnitude**2, c, s, angle)
+    return replace(point, w=live.to_buses(point.w[live.bus], np.nan), angle=live.to_buses(angle[live.bus], np.nan))
 
 
 def outputs_of(program: AcProgram, inputs: IntervalInputs, x: FloatArray) -> FloatArray:
@@ -100,161 +95,14 @@ def resource_cost(program: AcProgram, inputs: IntervalInputs, x: FloatArray) -> 
 
 def balance_multipliers(program: AcProgram, solution: AcSolution) -> BalanceMultipliers:
     """Return the prices of active and reactive load and of the squared voltage, `nan` at dead buses."""
-    layout = program.layout
-    active, reactive, squared = (np.full(program.network.n_bus, np.nan) for _ in range(3))
-    active[layout.bus] = -solution.row_multiplier[layout.rows["active"]]
-    reactive[layout.bus] = -solution.row_multiplier[layout.rows["reactive"]]
+    layout, live = program.layout, program.layout.live
     magnitude = layout.variables["magnitude"]
-    squared[layout.bus] = solution.bound_multiplier[magnitude] / (2.0 * solution.x[magnitude])
-    return BalanceMultipliers(active=active, reactive=reactive, squared_voltage=squared)
-
-
-def constraint_rows(
-    program: AcProgram,
-    inputs: IntervalInputs,
-    flow_limits: FlowLimits,
-    solution: AcSolution,
-    point: OperatingPoint,
-    options: DispatchOptions,
-) -> ConstraintRows:
-    """Return the limits that are active or priced, with keys, values and multipliers."""
-    network, layout, base = program.network, program.layout, program.network.base_mva
-    tolerances = options.tolerances
-    at, rows = layout.variables, layout.rows
-    penalty = options.penalties.transmission
-    row = solution.row_multiplier
-    parts: list[ConstraintRows] = []
-
-    def add(
-        *,
-        kind: tuple[str, ...] | str,
-        contingency: tuple[str, ...] | None = None,
-        monitored: tuple[str, ...],
-        direction: tuple[str, ...] | str,
-        unit: str,
-        to_unit: float,
-        limit: FloatArray,
-        value: FloatArray,
-        slack: FloatArray,
-        multiplier: FloatArray,
-        gain: sparse.csr_array | None = None,
-        at_penalty: BoolArray | None = None,
-    ) -> None:
-        size = limit.size
-        room = np.maximum(tolerances.active_slack_mw / base, tolerances.active_slack_relative * np.abs(limit))
-        keep = (slack <= room) | (multiplier > tolerances.shadow_price * base)
-        keep &= np.isfinite(limit)
-        every = ConstraintRows(
-            kind=(kind,) * size if isinstance(kind, str) else kind,
-            contingency=contingency or ("",) * size,
-            monitored=monitored,
-            direction=(direction,) * size if isinstance(direction, str) else direction,
-            unit=(unit,) * size,
-            to_unit=np.full(size, to_unit),
-            limit=limit,
-            value=value,
-            multiplier=multiplier,
-            angle_gain=gain if gain is not None else sparse.csr_array((size, network.n_branch)),
-            at_penalty=at_penalty if at_penalty is not None else np.zeros(size, dtype=bool),
-        )
-        parts.append(every.take(keep))
-
-    rated = layout.rated
-    rating = network.normal_rating[rated]
-    eased = rating + solution.x[at["overload"]] if penalty is not None else rating
-    names = tuple(network.branches[i] for i in rated)
-    forward = tuple("forward" if p >= 0 else "reverse" for p in point.p_from[rated] - point.p_to[rated])
-    ends = {}
-    for end, p, q, dp, dq in (
-        ("thermal_from", point.p_from, point.q_from, point.dp_from, point.dq_from),
-        ("thermal_to", point.p_to, point.q_to, point.dp_to, point.dq_to),
-    ):
-        apparent = np.hypot(p[rated], q[rated])
-        turn = (p * dp + q * dq)[rated] / np.maximum(apparent, 1e-12)
-        ends[end] = apparent, turn, 2.0 * eased * np.maximum(row[rows[end]], 0.0)
-    total = ends["thermal_from"][2] + ends["thermal_to"][2]
-    for apparent, turn, multiplier in ends.values():
-        add(
-            kind="thermal",
-            monitored=names,
-            direction=forward,
-            unit="MVA",
-            to_unit=base,
-            limit=rating,
-            value=apparent,
-            slack=rating - apparent,
-            multiplier=multiplier,
-            gain=_on_branches(rated, turn, network.n_branch),
-            at_penalty=_at_penalty(total, penalty, options, base) & (multiplier > 0),
-        )
-
-    limited = layout.angle_limited
-    difference = point.angle[network.from_bus[limited]] - point.angle[network.to_bus[limited]]
-    for sign, bound, direction in ((1.0, network.angle_max, "upper"), (-1.0, network.angle_min, "lower")):
-        add(
-            kind="angle",
-            monitored=tuple(network.branches[i] for i in limited),
-            direction=direction,
-            unit="deg",
-            to_unit=float(np.rad2deg(1.0)),
-            limit=bound[limited],
-            value=difference,
-            slack=sign * (bound[limited] - difference),
-            multiplier=np.maximum(sign * row[rows["angle"]], 0.0),
-            gain=_on_branches(limited, np.full(limited.size, sign), network.n_branch),
-        )
-
-    value = flow_limits.weights @ point.p_from
-    multiplier = np.maximum(row[rows["flow"]], 0.0)
-    turning = sparse.diags_array(point.dp_from, format="csr")
-    add(
-        kind=flow_limits.kind,
-        contingency=flow_limits.contingency,
-        monitored=flow_limits.monitored,
-        direction=flow_limits.direction,
-        unit="MW",
-        to_unit=base,
-        limit=flow_limits.limit,
-        value=value,
-        slack=flow_limits.limit - value,
-        multiplier=multiplier,
-        gain=sparse.csr_array(flow_limits.weights @ turning),
-        at_penalty=_at_penalty(multiplier, penalty, options, base),
+    squared = solution.bound_multiplier[magnitude] / (2.0 * solution.x[magnitude])
+    return BalanceMultipliers(
+        active=live.to_buses(-solution.row_multiplier[layout.rows["active"]], np.nan),
+        reactive=live.to_buses(-solution.row_multiplier[layout.rows["reactive"]], np.nan),
+        squared_voltage=live.to_buses(squared, np.nan),
     )
-
-    bus = layout.bus
-    on = np.flatnonzero(inputs.resource_in_service)
-    for kind, names, low, high, block, unit, to_unit in (
-        ("voltage", network.buses, network.v_min[bus], network.v_max[bus], "magnitude", "pu", 1.0),
-        ("reactive", network.resources, network.q_min[on], network.q_max[on], "q", "Mvar", base),
-    ):
-        items = bus if kind == "voltage" else on
-        where = np.arange(bus.size) if kind == "voltage" else on
-        value = solution.x[at[block]][where]
-        bound = solution.bound_multiplier[at[block]][where]
-        for sign, limit, direction in ((1.0, high, "upper"), (-1.0, low, "lower")):
-            add(
-                kind=kind,
-                monitored=tuple(names[i] for i in items),
-                direction=direction,
-                unit=unit,
-                to_unit=to_unit,
-                limit=limit,
-                value=value,
-                slack=sign * (limit - value),
-                multiplier=np.maximum(sign * bound, 0.0),
-            )
-    return ConstraintRows.concatenate(parts, network.n_branch)
-
-
-def _at_penalty(multiplier: FloatArray, penalty: float | None, options: DispatchOptions, base: float) -> BoolArray:
-    if penalty is None:
-        return np.zeros(multiplier.size, dtype=bool)
-    return np.asarray(multiplier >= penalty * base * (1.0 - options.tolerances.penalty_match), dtype=bool)
-
-
-def _on_branches(branch: IntArray, gain: FloatArray, n_branch: int) -> sparse.csr_array:
-    return sparse.csr_array((gain, branch, np.arange(branch.size + 1)), shape=(branch.size, n_branch))
 
 
 def stationarity_system(
@@ -289,7 +137,7 @@ def stationarity_system(
         equation = low == high
         if not parts:
             # The active balances come first among the equations, so their rows are their own positions.
-            balance[layout.bus] = np.arange(layout.bus.size)
+            balance[layout.live.bus] = np.arange(layout.live.n_bus)
         parts.append(-matrix[equation])
         multipliers.append(-multiplier[equation])
         free.append(np.ones(np.count_nonzero(equation), dtype=bool))

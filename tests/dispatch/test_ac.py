@@ -374,6 +374,24 @@ def test_dead_bus_has_no_price_and_a_note() -> None:
     assert any("east" in note for note in result.notes)
 
 
+def test_load_at_a_dead_bus_goes_unserved_at_the_penalty_or_makes_the_interval_infeasible() -> None:
+    network, inputs = two_bus(load_mw=80.0)
+    inputs = replace(
+        inputs,
+        branch_in_service=np.zeros(1, dtype=bool),
+        resource_in_service=np.array([True, False]),
+        load_p=np.array([1.0, 0.8]),
+        p_max=np.array([5.0, 0.0]),
+        segments=replace(inputs.segments, width=np.array([5.0, 0.0])),
+    )
+    result = solve(network, inputs)
+    assert result.status is SolveStatus.INFEASIBLE
+    assert "load at east" in result.message
+    result = solve(network, inputs, options=DispatchOptions(penalties=Penalties(power_balance=3000.0)))
+    np.testing.assert_allclose(100 * result.unserved, [0.0, 80.0], atol=1e-4)
+    assert result.objective == pytest.approx(2000.0 + 3000.0 * 80.0, rel=1e-7)
+
+
 def test_infeasible_is_a_status_with_no_figure_that_could_pass_for_a_price() -> None:
     network, inputs = load_network("case5")
     result = solve(network, scale_load(inputs, 3.0))

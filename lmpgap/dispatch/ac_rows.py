@@ -1,0 +1,171 @@
+"""Constraint rows of the AC dispatch: ratings, angles, voltage bands, reactive ranges, weighted flows."""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy import sparse
+
+from lmpgap.dispatch.ac_interval import AcVectors
+from lmpgap.dispatch.ac_model import AcProgram
+from lmpgap.dispatch.ac_result import AcSolution
+from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
+from lmpgap.dispatch.rows import at_penalty, branch_gain, constraint_rows, flow_limit_rows
+from lmpgap.scenario.network import FloatArray, IntervalInputs
+
+
+def ac_constraints(
+    program: AcProgram,
+    vectors: AcVectors,
+    inputs: IntervalInputs,
+    flow_limits: FlowLimits,
+    solution: AcSolution,
+    point: OperatingPoint,
+    options: DispatchOptions,
+) -> ConstraintRows:
+    """Return all rows with a shadow price or active."""
+    at = program.layout.variables
+    soft = options.penalties.transmission is not None
+    return ConstraintRows.concatenate(
+        [
+            *_thermal(program, solution, point, options),
+            *_angle(program, solution, point, options),
+            *_bounds(program, vectors, inputs, solution, options),
+            flow_limit_rows(
+                flow_limits,
+                p_from=point.p_from,
+                dp_from=point.dp_from,
+                multiplier=np.maximum(solution.row_multiplier[program.layout.rows["flow"]], 0.0),
+                excess=solution.x[at["flow_excess"]] if soft else None,
+                penalty=options.penalties.transmission,
+                tolerances=options.tolerances,
+                base_mva=program.network.base_mva,
+            ),
+        ],
+        program.network.n_branch,
+    )
+
+
+def _thermal(
+    program: AcProgram, solution: AcSolution, point: OperatingPoint, options: DispatchOptions
+) -> list[ConstraintRows]:
+    """Ratings at both ends; the direction is that of the active flow at the from end, so that both ends share a key.
+
+    The rows limit S^2 by (rating + excess)^2, so the multiplier per unit of rating is 2 (rating + excess) times theirs.
+    """
+    network, layout = program.network, program.layout
+    base, tolerances = network.base_mva, options.tolerances
+    rated = layout.live.branch[layout.rated]
+    limit = network.normal_rating[rated]
+    excess = solution.x[layout.variables["excess"]] if options.penalties.transmission is not None else None
+    eased = limit if excess is None else limit + excess
+    multiplier = {
+        end: 2.0 * eased * np.maximum(solution.row_multiplier[layout.rows[f"thermal_{end}"]], 0.0)
+        for end in ("from", "to")
+    }
+    gave_way = at_penalty(
+        multiplier["from"] + multiplier["to"], excess, options.penalties.transmission, tolerances, base
+    )
+    parts = []
+    for end, p, q, dp, dq in (
+        ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
+        ("to", point.p_to, point.q_to, point.dp_to, point.dq_to),
+    ):
+        size = np.hypot(p[rated], q[rated])
+        turn = p[rated] * dp[rated] + q[rated] * dq[rated]
+        gain = np.divide(turn, size, out=np.zeros_like(size), where=size > 0.0)
+        parts.append(
+            constraint_rows(
+                kind="thermal",
+                monitored=[network.branches[k] for k in rated],
+                direction=["forward" if flow >= 0.0 else "reverse" for flow in point.p_from[rated]],
+                unit="MVA",
+                to_unit=base,
+                limit=limit,
+                value=size,
+                slack=limit - size,
+                multiplier=multiplier[end],
+                angle_gain=branch_gain(rated, gain, network.n_branch),
+                tolerances=tolerances,
+                base_mva=base,
+                at_penalty=gave_way & ((multiplier[end] > tolerances.shadow_price * base) | (size >= limit)),
+            )
+        )
+    return parts
+
+
+def _angle(
+    program: AcProgram, solution: AcSolution, point: OperatingPoint, options: DispatchOptions
+) -> list[ConstraintRows]:
+    network, layout = program.network, program.layout
+    every = layout.live.branch[layout.angle_limited]
+    multiplier = solution.row_multiplier[layout.rows["angle"]]
+    difference = point.angle[network.from_bus[every]] - point.angle[network.to_bus[every]]
+    parts = []
+    for side, sign, limit in (("upper", 1.0, network.angle_max[every]), ("lower", -1.0, network.angle_min[every])):
+        on = np.flatnonzero(np.isfinite(limit))
+        parts.append(
+            constraint_rows(
+                kind="angle",
+                monitored=[network.branches[k] for k in every[on]],
+                direction=(side,) * on.size,
+                unit="deg",
+                to_unit=180.0 / np.pi,
+                limit=limit[on],
+                value=difference[on],
+                slack=sign * (limit - difference)[on],
+                multiplier=_clean(sign * multiplier[on], options, network.base_mva),
+                angle_gain=branch_gain(every[on], np.full(on.size, sign), network.n_branch),
+                tolerances=options.tolerances,
+                base_mva=network.base_mva,
+            )
+        )
+    return parts
+
+
+def _bounds(
+    program: AcProgram,
+    vectors: AcVectors,
+    inputs: IntervalInputs,
+    solution: AcSolution,
+    options: DispatchOptions,
+) -> list[ConstraintRows]:
+    """Voltage bands of the live buses and reactive ranges of their resources in service."""
+    network, live, at = program.network, program.layout.live, program.layout.variables
+    on = inputs.resource_in_service & (live.bus_position[network.resource_bus] >= 0)
+    parts = []
+    for kind, block, unit, to_unit, names, shown in (
+        ("voltage", "magnitude", "pu", 1.0, [network.buses[i] for i in live.bus], np.ones(live.n_bus, dtype=bool)),
+        ("reactive", "q", "Mvar", network.base_mva, network.resources, on),
+    ):
+        where = at[block]
+        value, multiplier = solution.x[where], solution.bound_multiplier[where]
+        for side, sign, limit in (("upper", 1.0, vectors.upper[where]), ("lower", -1.0, vectors.lower[where])):
+            rows = np.flatnonzero(shown & np.isfinite(limit))
+            parts.append(
+                constraint_rows(
+                    kind=kind,
+                    monitored=[names[i] for i in rows],
+                    direction=(side,) * rows.size,
+                    unit=unit,
+                    to_unit=to_unit,
+                    limit=limit[rows],
+                    value=value[rows],
+                    slack=sign * (limit - value)[rows],
+                    multiplier=_clean(sign * multiplier[rows], options, network.base_mva),
+                    angle_gain=sparse.csr_array((rows.size, network.n_branch)),
+                    tolerances=options.tolerances,
+                    base_mva=network.base_mva,
+                )
+            )
+    return parts
+
+
+def _clean(multiplier: FloatArray, options: DispatchOptions, base_mva: float) -> FloatArray:
+    """Return multipliers without interior-point dust.
+
+    A barrier leaves a small multiplier on every limit. Per unit of voltage or per radian, dust of a power's size would
+    count as a shadow price, so the threshold is that of a power of one per unit everywhere.
+    """
+    return np.where(multiplier > options.tolerances.shadow_price * base_mva, multiplier, 0.0)
