@@ -133,7 +133,7 @@ def _priced(
             found = price_intervals(result.stationarity, network.base_mva, tolerances)
             # The interval contains the price that is reported, whatever the tolerance of the search.
             low, high = np.fmin(found.low, split.lmp), np.fmax(found.high, split.lmp)
-        money = tuple(money_balance(network, inputs, result, split, limits, hours=hours).rows())
+        money = tuple(money_balance(network, inputs, result, split, hours=hours).rows())
     check = ac_check(network, inputs, result, limits) if result.relaxed and result.status.has_solution else None
     certificate = certify(network, inputs, result, split, ac=ac, check=check, tolerances=tolerances)
     return SolvedInterval(
