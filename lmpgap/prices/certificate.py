@@ -189,10 +189,11 @@ def _residual_faults(
         ("price residual", price_residual, tolerances.price_residual, "$/MWh"),
         ("marginal cost against price inside a segment", marginal_error, tolerances.dual_residual, "$/MWh"),
     ]
-    if not result.relaxed:
-        # A relaxation carries fictitious loss by design; its verdict is made from the AC check.
-        fictitious = result.fictitious_loss * base
-        figures.append(("loss beyond the physical one", fictitious, tolerances.fictitious_loss_mw, "MW"))
+    if not result.relaxed and result.frozen is None:
+        # A relaxation carries fictitious loss by design, its verdict is made from the AC check; losses at given
+        # factors are what the factors make of them. A linearised loss below the physical one burns nothing.
+        burnt = max(result.fictitious_loss * base, 0.0)
+        figures.append(("loss beyond the physical one", burnt, tolerances.fictitious_loss_mw, "MW"))
     return [
         f"{name}: {value:.3g} {unit}".rstrip() + f", accepted up to {accepted:g}"
         for name, value, accepted, unit in figures
