@@ -15,8 +15,6 @@ from lmpgap.prices.components import OTHER_SOURCES, PriceSplit, constraints_of
 from lmpgap.runs.schema import RUN_TABLES, SOLVED_TABLES
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 
-MONEY_BASIS = ("components", "constraints")
-
 
 @dataclass(frozen=True, kw_only=True)
 class SolvedInterval:

@@ -215,7 +215,7 @@ RUN_TABLES: dict[str, RunTable] = {
                     _INTERVAL,
                     _FORMULATION,
                     ("item", "text", "", "what the money is"),
-                    ("basis", "text", "", "components or constraints"),
+                    ("basis", "text", "", "total, components or constraints; each adds up to the surplus"),
                     ("amount", "number", "$", ""),
                 ]
             ),

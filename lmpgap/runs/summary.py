@@ -6,6 +6,7 @@ import numpy as np
 import pandas as pd
 
 from lmpgap.dispatch.names import FORMULATIONS
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.runs.folder import RunFolder
 
 
@@ -40,7 +41,3 @@ def summarise_run(folder: RunFolder) -> pd.DataFrame:
             }
         )
     return pd.DataFrame(rows)
-
-
-USABLE_VERDICTS = ("certified", "exact", "close")
-"""Verdicts of solves whose prices may be used; a `close` one with its error bound in mind."""
