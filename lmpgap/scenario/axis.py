@@ -8,9 +8,9 @@ import numpy as np
 
 from lmpgap.scenario.faults import FaultLog, as_rows, listing
 from lmpgap.scenario.intervals import IntervalRows, interval_axis
-from lmpgap.scenario.parse import ColumnTable, TimeArray
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.times import hour_ending_labels
+from lmpgap.scenario.typed import ColumnTable, TimeArray
 
 _ON_THE_AXIS = ("offers", "bids", "availability", "interface_limits", "delivery_factors")
 """Tables whose rows have no effect beside the axis."""

@@ -8,7 +8,7 @@ import numpy as np
 from scipy import sparse
 
 from lmpgap.scenario.network import Contingencies, FloatArray, Interfaces, Network
-from lmpgap.scenario.parse import ColumnTable
+from lmpgap.scenario.typed import ColumnTable
 
 
 def name_positions(tables: Mapping[str, ColumnTable]) -> dict[str, dict[str, int]]:

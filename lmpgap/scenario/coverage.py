@@ -8,8 +8,8 @@ import numpy as np
 
 from lmpgap.scenario.faults import FaultLog, as_rows, listing
 from lmpgap.scenario.intervals import IntervalSource, start_label
-from lmpgap.scenario.parse import ColumnTable
 from lmpgap.scenario.settings import ScenarioSettings
+from lmpgap.scenario.typed import ColumnTable
 
 _TOLERANCE_MW = 1e-6
 

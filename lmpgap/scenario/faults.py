@@ -15,7 +15,7 @@ KEPT_PER_KIND = 10_000
 """Fault objects that are kept of one kind in one column; the rest is counted in one closing entry, so that a
 table of a million bad rows cannot fill the memory."""
 
-SUGGESTED_VALUES = 50
+SUGGESTED_VALUES = 20
 """Distinct unknown values of one column for which a nearest name is looked up; the search is slow."""
 
 
@@ -136,10 +136,11 @@ def clip_text(text: str, length: int = 80) -> str:
     return text if len(text) <= length else text[: length - 3] + "..."
 
 
-def listing(names: Sequence[str], limit: int = 5) -> str:
-    """Return ``a, b, c and 7 more``."""
+def listing(names: Sequence[str], limit: int = 5, total: int | None = None) -> str:
+    """Return ``a, b, c and 7 more``; ``total`` is the count where ``names`` are only the first ones."""
+    total = len(names) if total is None else total
     shown = ", ".join(clip_text(name, 40) for name in names[:limit])
-    return shown if len(names) <= limit else f"{shown} and {len(names) - limit:,} more"
+    return shown if total <= limit else f"{shown} and {total - limit:,} more"
 
 
 def as_rows(mask: np.ndarray[tuple[int], np.dtype[np.bool_]]) -> IntArray:

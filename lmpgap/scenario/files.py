@@ -11,7 +11,6 @@ import csv
 import hashlib
 import io
 import stat
-from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -22,9 +21,7 @@ import pyarrow.csv
 from lmpgap.scenario.faults import FaultLog, clip_text, suggestion
 from lmpgap.scenario.network import IntArray
 from lmpgap.scenario.tables import TABLES
-
-Lines = Callable[[IntArray], IntArray]
-"""Gives the line in the file (a Parquet file: the row counted from 1) for zero-based rows."""
+from lmpgap.scenario.typed import Lines, row_numbers
 
 FORMATS = (".csv", ".parquet")
 _DELIMITERS = {",": "commas", ";": "semicolons", "\t": "tabs"}
@@ -58,11 +55,6 @@ class RawTable:
     def n_row(self) -> int:
         """Number of rows."""
         return len(self.columns[0]) if self.columns else 0
-
-
-def row_numbers(rows: IntArray) -> IntArray:
-    """Return rows counted from 1."""
-    return np.asarray(rows + 1, dtype=np.int64)
 
 
 def read_bytes(path: Path, folder: Path, log: FaultLog) -> bytes | None:
@@ -262,10 +254,10 @@ def _read_quoted(file: str, text: str, delimiter: str, log: FaultLog) -> RawTabl
 
 
 def _read_parquet(file: str, content: bytes, log: FaultLog) -> RawTable | None:
-    import pyarrow.parquet
+    from pyarrow import parquet
 
     try:
-        table = pyarrow.parquet.read_table(pa.BufferReader(content))
+        table = parquet.read_table(pa.BufferReader(content))
     except (pa.ArrowException, OSError, ValueError) as error:
         log.fault(file, f"is not a readable Parquet file: {clip_text(str(error).splitlines()[0])}")
         return None

@@ -20,7 +20,7 @@ from lmpgap.scenario.network import (
     IntervalInputs,
 )
 from lmpgap.scenario.offers import OfferCurves, build_offer_curves
-from lmpgap.scenario.parse import ColumnTable, TimeArray
+from lmpgap.scenario.typed import ColumnTable, TimeArray
 
 STATIC_START = np.datetime64("2026-01-01T00:00:00", "us")
 """Label of the one interval of a scenario whose loads have no `interval_start`."""

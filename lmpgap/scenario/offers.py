@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, OfferSegments
-from lmpgap.scenario.parse import ColumnTable, TimeArray
+from lmpgap.scenario.typed import ColumnTable, TimeArray
 
 
 @dataclass(frozen=True)

@@ -14,9 +14,9 @@ from lmpgap.scenario.axis import check_axis
 from lmpgap.scenario.build import build_network, name_positions
 from lmpgap.scenario.coverage import check_coverage
 from lmpgap.scenario.faults import FaultLog
-from lmpgap.scenario.files import decode, read_bytes, read_raw, row_numbers, table_files
+from lmpgap.scenario.files import decode, read_bytes, read_raw, table_files
 from lmpgap.scenario.intervals import build_intervals, interval_axis
-from lmpgap.scenario.parse import ColumnTable, empty_table, to_typed
+from lmpgap.scenario.parse import to_typed
 from lmpgap.scenario.plausible import check_plausibility
 from lmpgap.scenario.posted import read_posted
 from lmpgap.scenario.rules import check_tables
@@ -25,6 +25,7 @@ from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.settings_file import SETTINGS_FILE, read_settings
 from lmpgap.scenario.tables import TABLES
 from lmpgap.scenario.topology import check_topology
+from lmpgap.scenario.typed import ColumnTable, empty_table, row_numbers
 
 
 def read_scenario(folder: Path | str) -> Scenario:

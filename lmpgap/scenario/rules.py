@@ -8,9 +8,9 @@ import numpy as np
 
 from lmpgap.scenario.faults import SUGGESTED_VALUES, FaultLog, as_rows, clip_text, suggestion
 from lmpgap.scenario.network import BoolArray, IntArray
-from lmpgap.scenario.parse import ColumnTable, TextColumn
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.tables import TABLES
+from lmpgap.scenario.typed import ColumnTable, TextColumn
 
 _CURVE_TOLERANCE_MW = 1e-6
 _CURVE_TOLERANCE_PRICE = 1e-9

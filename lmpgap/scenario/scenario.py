@@ -13,9 +13,9 @@ import numpy as np
 from lmpgap.errors import Fault
 from lmpgap.scenario.intervals import IntervalSource
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
-from lmpgap.scenario.parse import ColumnTable, TextColumn, TimeArray
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.times import hour_ending_labels
+from lmpgap.scenario.typed import ColumnTable, TextColumn, TimeArray
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -122,7 +122,7 @@ class Scenario:
             total = float(load.sum())
             if total <= 0:
                 return np.full(load.size, 1.0 / load.size)
-            return load / total
+            return np.asarray(load / total)
         weights = np.zeros(self.network.n_bus)
         if kind == "bus":
             weights[self.network.buses.index(self.settings.reference.bus)] = 1.0

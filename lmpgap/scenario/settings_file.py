@@ -132,7 +132,7 @@ def _dates(value: Any) -> tuple[date, ...]:
 def _column_map(value: Any) -> dict[str, str]:
     if not isinstance(value, dict):
         raise ValueError('a table such as [posted.columns] with lines like lmp = "Total price"')
-    known = [*TABLES["posted"].column_names, *TABLES["posted_constraints"].column_names, "component", "date"]
+    known = [*TABLES["posted"].column_names, *TABLES["posted_constraints"].column_names, "component", "date", "hour"]
     columns = {}
     for name, own in value.items():
         if name not in known:

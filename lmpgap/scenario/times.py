@@ -7,7 +7,7 @@ from datetime import UTC, datetime, timedelta
 
 import numpy as np
 
-from lmpgap.scenario.parse import TimeArray
+from lmpgap.scenario.typed import TimeArray
 
 
 def hour_ending_labels(starts: TimeArray, time_zone: str, interval_minutes: int = 60) -> list[str]:

@@ -6,10 +6,10 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from lmpgap.scenario.faults import FaultLog, listing
-from lmpgap.scenario.intervals import IntervalSource
+from lmpgap.scenario.faults import FaultLog, clip_text, listing
+from lmpgap.scenario.intervals import IntervalSource, start_label
 from lmpgap.scenario.network import BoolArray, Contingencies, IntArray, Network
-from lmpgap.scenario.parse import ColumnTable
+from lmpgap.scenario.typed import ColumnTable
 
 
 def dead_buses(network: Network, branch_in_service: BoolArray, has_source: BoolArray) -> BoolArray:
@@ -124,19 +124,73 @@ def _dependent(labels: list[int]) -> bool:
 
 def check_topology(tables: Mapping[str, ColumnTable], network: Network, source: IntervalSource, log: FaultLog) -> None:
     """Report contingencies that split the network (faults), and islands and dead buses (warnings)."""
-    contingencies = network.contingencies
-    if contingencies is not None:
-        table = tables["contingencies"]
-        first = {name: row for row, name in reversed(list(enumerate(table.text("contingency").tolist())))}
-        for i in np.flatnonzero(islanding_contingencies(network, source.branch_in_service)):
+    normal = source.branch_in_service
+    if network.contingencies is not None:
+        _check_contingencies(tables, network, source, network.contingencies, log)
+    has_source = np.zeros(network.n_bus, dtype=bool)
+    has_source[network.resource_bus[source.resource_in_service]] = True
+    dead = np.flatnonzero(dead_buses(network, normal, has_source))
+    if dead.size:
+        log.warn(
+            tables["buses"].file,
+            f"{dead.size:,} {'buses' if dead.size > 1 else 'bus'} in islands without a resource have no price: "
+            f"{listing([network.buses[i] for i in dead[:5]], total=dead.size)}",
+            row=int(tables["buses"].lines(dead[:1])[0]),
+            column="bus",
+            kind="dead bus",
+        )
+    island = network.islands(normal)
+    alive = np.unique(island[has_source])
+    if alive.size > 1:
+        log.warn(
+            tables["branches"].file,
+            f"the network falls into {alive.size:,} islands with resources; each has an energy price of its own",
+            kind="islands",
+        )
+
+
+def _check_contingencies(
+    tables: Mapping[str, ColumnTable],
+    network: Network,
+    source: IntervalSource,
+    contingencies: Contingencies,
+    log: FaultLog,
+) -> None:
+    table = tables["contingencies"]
+    first = {name: row for row, name in reversed(list(enumerate(table.text("contingency").tolist())))}
+    refused = islanding_contingencies(network, source.branch_in_service)
+
+    def line(name: str) -> int:
+        return int(table.lines(np.array([first[name]]))[0])
+
+    for i in np.flatnonzero(refused).tolist():
+        name = contingencies.names[i]
+        log.fault(
+            table.file,
+            f"would split the network by taking out {listing([network.branches[b] for b in contingencies.branches[i]])}"
+            ": there are no outage factors for that",
+            row=line(name),
+            column="contingency",
+            value=clip_text(name),
+            allowed="contingencies that leave the network in one piece; leave this one out",
+            kind="islanding contingency",
+        )
+    # During a planned outage more contingencies can split the network: those are left out while it lasts.
+    spans = source.branch_outages
+    for position in np.unique(np.clip(np.concatenate([spans.first, spans.end]), 0, source.n_interval - 1)):
+        on = spans.apply(source.branch_in_service, int(position))
+        if np.array_equal(on, source.branch_in_service):
+            continue
+        for i in np.flatnonzero(islanding_contingencies(network, on) & ~refused).tolist():
             name = contingencies.names[i]
-            out = [network.branches[b] for b in contingencies.branches[i]]
-            log.fault(
+            refused[i] = True
+            out = [network.branches[b] for b in np.flatnonzero(source.branch_in_service & ~on)]
+            log.warn(
                 table.file,
-                f"would split the network by taking out {listing(out)}: outage factors do not exist",
-                row=int(table.lines(np.array([first[name]]))[0]),
+                f"would split the network while {listing(out)} {'are' if len(out) > 1 else 'is'} out; it is not "
+                f"checked in such intervals, the first of which starts {start_label(source.starts[position])}",
+                row=line(name),
                 column="contingency",
-                value=name,
-                allowed="outages that leave every bus connected as before; leave this one out",
+                value=clip_text(name),
                 kind="islanding contingency",
             )
