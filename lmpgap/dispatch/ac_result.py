@@ -43,7 +43,7 @@ class AcSolution:
 def residuals(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> SolverResiduals:
     """Return how far a solution is from the conditions of a local optimum, from the functions themselves.
 
-    ``primal`` is the largest violation of a row or bound [pu; pu^2 for MVA rows], ``dual`` the largest entry of the
+    ``primal`` is the largest violation of a row or bound [pu], ``dual`` the largest entry of the
     Lagrangian's gradient or of a multiplier that points away from any limit [$/h per pu], ``gap`` the sum of
     multiplier times slack [$/h].
     """
@@ -51,11 +51,11 @@ def residuals(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> S
     gradient = program.gradient(solution.x, vectors.parameter)
     stationarity = gradient + jacobian.T @ solution.row_multiplier + solution.bound_multiplier
     primal, gap, stray = 0.0, 0.0, 0.0
-    for point, low, high, multiplier in (
-        (value, vectors.row_lower, vectors.row_upper, solution.row_multiplier),
-        (solution.x, vectors.lower, vectors.upper, solution.bound_multiplier),
+    for point, low, high, multiplier, unit in (
+        (value, vectors.row_lower, vectors.row_upper, solution.row_multiplier, row_units(program, vectors)),
+        (solution.x, vectors.lower, vectors.upper, solution.bound_multiplier, np.ones(solution.x.size)),
     ):
-        primal = max(primal, float(np.max(np.maximum(low - point, point - high), initial=0.0)))
+        primal = max(primal, float(np.max(np.maximum(low - point, point - high) / unit, initial=0.0)))
         up, down = np.maximum(multiplier, 0.0), np.maximum(-multiplier, 0.0)
         slack_up, slack_down = high - point, point - low
         stray = max(stray, float(np.max(np.where(np.isinf(slack_up), up, 0.0), initial=0.0)))
@@ -66,6 +66,15 @@ def residuals(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> S
             gap += float(np.sum(np.where(limited & np.isfinite(slack_down), down * np.abs(slack_down), 0.0)))
     dual = max(float(np.max(np.abs(stationarity), initial=0.0)), stray)
     return SolverResiduals(primal=primal, dual=dual, gap=gap)
+
+
+def row_units(program: AcProgram, vectors: AcVectors) -> FloatArray:
+    """Return by what a row must be divided to be per unit, shape (n_row,): twice the rating for S^2, 1 elsewhere."""
+    unit = np.ones(program.layout.n_row)
+    for block in ("thermal_from", "thermal_to"):
+        rows = program.layout.rows[block]
+        unit[rows] = 2.0 * np.sqrt(np.maximum(vectors.row_upper[rows], 1e-12))
+    return unit
 
 
 def point_of(program: AcProgram, x: FloatArray) -> OperatingPoint:
@@ -115,9 +124,7 @@ def stationarity_system(
     layout, base = program.layout, program.network.base_mva
     tolerances = options.tolerances
     value, jacobian = program.rows(solution.x, vectors.parameter)
-    scale = np.ones(layout.n_row)
-    for block in ("thermal_from", "thermal_to"):
-        scale[layout.rows[block]] = 2.0 * np.sqrt(np.maximum(vectors.row_upper[layout.rows[block]], 1e-12))
+    scale = row_units(program, vectors)
     parts: list[sparse.csr_array] = []
     multipliers: list[FloatArray] = []
     free: list[BoolArray] = []

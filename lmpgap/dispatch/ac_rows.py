@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import numpy as np
-from scipy import sparse
 
 from lmpgap.dispatch.ac_interval import AcVectors
 from lmpgap.dispatch.ac_model import AcProgram
@@ -11,7 +10,7 @@ from lmpgap.dispatch.ac_result import AcSolution
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, branch_gain, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
 from lmpgap.scenario.network import FloatArray, IntervalInputs
 
 
@@ -64,9 +63,7 @@ def _thermal(
         end: 2.0 * eased * np.maximum(solution.row_multiplier[layout.rows[f"thermal_{end}"]], 0.0)
         for end in ("from", "to")
     }
-    gave_way = at_penalty(
-        multiplier["from"] + multiplier["to"], excess, options.penalties.transmission, tolerances, base
-    )
+    soft = at_penalty(multiplier["from"] + multiplier["to"], excess, options.penalties.transmission, tolerances, base)
     parts = []
     for end, p, q, dp, dq in (
         ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
@@ -78,18 +75,20 @@ def _thermal(
         parts.append(
             constraint_rows(
                 kind="thermal",
-                monitored=[network.branches[k] for k in rated],
-                direction=["forward" if flow >= 0.0 else "reverse" for flow in point.p_from[rated]],
+                names=network.branches,
+                owner=rated,
+                direction=point.p_from[rated] >= 0.0,
                 unit="MVA",
                 to_unit=base,
                 limit=limit,
                 value=size,
                 slack=limit - size,
                 multiplier=multiplier[end],
-                angle_gain=branch_gain(rated, gain, network.n_branch),
+                angle_gain=gain,
+                n_branch=network.n_branch,
                 tolerances=tolerances,
                 base_mva=base,
-                at_penalty=gave_way & ((multiplier[end] > tolerances.shadow_price * base) | (size >= limit)),
+                gave_way=soft & ((multiplier[end] > tolerances.shadow_price * base) | (size >= limit)),
             )
         )
     return parts
@@ -108,15 +107,17 @@ def _angle(
         parts.append(
             constraint_rows(
                 kind="angle",
-                monitored=[network.branches[k] for k in every[on]],
-                direction=(side,) * on.size,
+                names=network.branches,
+                owner=every[on],
+                direction=side,
                 unit="deg",
                 to_unit=180.0 / np.pi,
                 limit=limit[on],
                 value=difference[on],
                 slack=sign * (limit - difference)[on],
                 multiplier=_clean(sign * multiplier[on], options, network.base_mva),
-                angle_gain=branch_gain(every[on], np.full(on.size, sign), network.n_branch),
+                angle_gain=np.full(on.size, sign),
+                n_branch=network.n_branch,
                 tolerances=options.tolerances,
                 base_mva=network.base_mva,
             )
@@ -135,9 +136,9 @@ def _bounds(
     network, live, at = program.network, program.layout.live, program.layout.variables
     on = inputs.resource_in_service & (live.bus_position[network.resource_bus] >= 0)
     parts = []
-    for kind, block, unit, to_unit, names, shown in (
-        ("voltage", "magnitude", "pu", 1.0, [network.buses[i] for i in live.bus], np.ones(live.n_bus, dtype=bool)),
-        ("reactive", "q", "Mvar", network.base_mva, network.resources, on),
+    for kind, block, unit, to_unit, names, owner, shown in (
+        ("voltage", "magnitude", "pu", 1.0, network.buses, live.bus, np.ones(live.n_bus, dtype=bool)),
+        ("reactive", "q", "Mvar", network.base_mva, network.resources, np.arange(network.n_resource), on),
     ):
         where = at[block]
         value, multiplier = solution.x[where], solution.bound_multiplier[where]
@@ -146,15 +147,17 @@ def _bounds(
             parts.append(
                 constraint_rows(
                     kind=kind,
-                    monitored=[names[i] for i in rows],
-                    direction=(side,) * rows.size,
+                    names=names,
+                    owner=owner[rows],
+                    direction=side,
                     unit=unit,
                     to_unit=to_unit,
                     limit=limit[rows],
                     value=value[rows],
                     slack=sign * (limit - value)[rows],
                     multiplier=_clean(sign * multiplier[rows], options, network.base_mva),
-                    angle_gain=sparse.csr_array((rows.size, network.n_branch)),
+                    angle_gain=None,
+                    n_branch=network.n_branch,
                     tolerances=options.tolerances,
                     base_mva=network.base_mva,
                 )
