@@ -259,6 +259,7 @@ class AcProgram:
                 "ipopt.print_level": 0,
                 "ipopt.sb": "yes",
                 "ipopt.tol": self._options.tolerances.nonlinear_tolerance,
+                "ipopt.bound_relax_factor": self._options.tolerances.nonlinear_bound_relaxation,
                 **{f"ipopt.{name}": value for name, value in settings.items()},
                 **self._derivatives,
             }
