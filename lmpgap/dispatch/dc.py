@@ -10,6 +10,8 @@ with no loss here. "DC Power Flow Revisited", IEEE Transactions on Power Systems
 
 from __future__ import annotations
 
+from functools import partial
+
 import numpy as np
 from scipy import sparse
 
@@ -21,7 +23,7 @@ from lmpgap.dispatch.linear_model import linear_branches
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, branch_gain, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
 from lmpgap.dispatch.supply import (
     add_flow_limits,
     add_supply,
@@ -182,9 +184,17 @@ class DcDispatch(ConvexDispatch):
         def excess(name: str) -> FloatArray | None:
             return solution.x[template.variables[name]] if name in template.variables else None
 
+        rows = partial(
+            constraint_rows,
+            names=network.branches,
+            n_branch=network.n_branch,
+            tolerances=tolerances,
+            base_mva=base,
+        )
         parts = []
         rated = live.branch[rated_branches(live)]
-        gave_way = at_penalty(
+        rating = network.normal_rating[rated]
+        soft = at_penalty(
             dual["thermal forward"] + dual["thermal reverse"], excess("excess"), penalty, tolerances, base
         )
         for direction, flow, gain in (
@@ -192,21 +202,20 @@ class DcDispatch(ConvexDispatch):
             ("reverse", point.p_to[rated], point.dp_to[rated]),
         ):
             multiplier = dual[f"thermal {direction}"]
+            held = multiplier > tolerances.shadow_price * base
             parts.append(
-                constraint_rows(
+                rows(
                     kind="thermal",
-                    monitored=[network.branches[k] for k in rated],
-                    direction=(direction,) * rated.size,
+                    owner=rated,
+                    direction=direction,
                     unit="MW",
                     to_unit=base,
-                    limit=network.normal_rating[rated],
+                    limit=rating,
                     value=flow,
-                    slack=network.normal_rating[rated] - flow,
+                    slack=rating - flow,
                     multiplier=multiplier,
-                    angle_gain=branch_gain(rated, gain, network.n_branch),
-                    tolerances=tolerances,
-                    base_mva=base,
-                    at_penalty=gave_way & ((multiplier > 0.0) | (flow >= network.normal_rating[rated])),
+                    angle_gain=gain,
+                    gave_way=soft & (held | (flow >= rating)),
                 )
             )
         for direction, sign, limit in (
@@ -214,21 +223,18 @@ class DcDispatch(ConvexDispatch):
             ("lower", -1.0, network.angle_min[live.branch]),
         ):
             limited = np.flatnonzero(np.isfinite(limit))
-            branch = live.branch[limited]
             parts.append(
-                constraint_rows(
+                rows(
                     kind="angle",
-                    monitored=[network.branches[k] for k in branch],
-                    direction=(direction,) * branch.size,
+                    owner=live.branch[limited],
+                    direction=direction,
                     unit="deg",
                     to_unit=180.0 / np.pi,
                     limit=limit[limited],
                     value=difference[limited],
                     slack=sign * (limit[limited] - difference[limited]),
                     multiplier=dual[f"angle {direction}"],
-                    angle_gain=branch_gain(branch, np.full(branch.size, sign), network.n_branch),
-                    tolerances=tolerances,
-                    base_mva=base,
+                    angle_gain=np.full(limited.size, sign),
                 )
             )
         parts.append(

@@ -38,7 +38,7 @@ from lmpgap.dispatch.supply import SupplyResult
 from lmpgap.errors import LmpgapError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network, incidence
 
-OPEN_SLACK_PASSES = 12
+OPEN_SLACK_PASSES = 30
 """Passes of re-freezing losses around the flows found; measured: 2 to 4 suffice."""
 
 FACTOR_PASSES = 40
@@ -55,9 +55,9 @@ class FrozenLossDispatch(DcDispatch):
     ----------
     base
         A solution whose angles and outputs are the base; of any formulation and any interval.
-    at_base
-        True when this very interval is solved again around its own solution: the proximal weight is then
-        ``tolerances.proximal_at_base`` and otherwise ``tolerances.proximal_away``.
+    proximal
+        Weight of the deviations [$/MWh per MW]; ``tolerances.proximal_away`` unless given. Use
+        ``tolerances.proximal_at_base`` when this very interval is solved again around its own solution.
 
     Raises
     ------
@@ -74,7 +74,7 @@ class FrozenLossDispatch(DcDispatch):
         options: DispatchOptions,
         base: DispatchResult,
         *,
-        at_base: bool = False,
+        proximal: float | None = None,
     ) -> None:
         if not base.status.has_solution:
             raise LmpgapError(f"losses cannot be frozen around a dispatch without a solution ({base.message})")
@@ -83,8 +83,7 @@ class FrozenLossDispatch(DcDispatch):
         across = angle[network.from_bus] - angle[network.to_bus] - self.linear.shift
         self.base_flow = self.linear.susceptance * across
         self.base_p = base.p
-        tolerances = options.tolerances
-        self.proximal = tolerances.proximal_at_base if at_base else tolerances.proximal_away
+        self.proximal = options.tolerances.proximal_away if proximal is None else proximal
 
     def _voltage_profile(self) -> FloatArray | None:
         return self.options.voltage_profile
@@ -127,15 +126,18 @@ def resolve_open_slack(
 ) -> DispatchResult:
     """Return the dispatch with losses frozen around its own flows, for an interval whose relaxed losses are fictitious.
 
-    The losses are frozen around the flows found until they reproduce themselves.
+    The losses are frozen around the flows found until they reproduce themselves. A plain repetition may go round in
+    circles, so the proximal weight grows whenever a pass does not halve the error; near the end the dispatch hardly
+    moves and the weight leaves no trace in the prices.
     """
     network, options = formulation.network, formulation.options
     tolerated = options.tolerances.fictitious_loss_mw / network.base_mva
     burnt = relaxed.fictitious_loss * network.base_mva
     base, best, seconds, passes = relaxed, None, 0.0, 0
+    proximal, error = options.tolerances.proximal_at_base, np.inf
     while passes < OPEN_SLACK_PASSES:
         passes += 1
-        frozen = FrozenLossDispatch(network, formulation.branch_in_service, options, base, at_base=True)
+        frozen = FrozenLossDispatch(network, formulation.branch_in_service, options, base, proximal=proximal)
         result = frozen.solve(inputs, flow_limits)
         seconds += result.solver_seconds
         if not result.status.has_solution:
@@ -144,7 +146,9 @@ def resolve_open_slack(
             best = result
         if abs(result.fictitious_loss) <= tolerated:
             break
-        base = result
+        if abs(result.fictitious_loss) > 0.5 * error:
+            proximal *= 4.0
+        base, error = result, abs(result.fictitious_loss)
     if best is None:
         return replace(result, loss_slack_open=True, solver_seconds=seconds)
     note = (

@@ -9,47 +9,66 @@ from scipy import sparse
 
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import ConstraintRows
-from lmpgap.scenario.network import FloatArray, IntArray
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
 from lmpgap.tolerances import Tolerances
 
 
 def constraint_rows(
     *,
     kind: str,
-    monitored: Sequence[str],
-    direction: Sequence[str],
+    names: Sequence[str],
+    owner: IntArray,
+    direction: str | BoolArray,
     unit: str,
     to_unit: float,
     limit: FloatArray,
     value: FloatArray,
     slack: FloatArray,
     multiplier: FloatArray,
-    angle_gain: sparse.csr_array,
+    angle_gain: FloatArray | None,
+    n_branch: int,
     tolerances: Tolerances,
     base_mva: float,
-    at_penalty: np.ndarray | None = None,
+    gave_way: BoolArray | None = None,
 ) -> ConstraintRows:
     """Return the rows that have a shadow price or are active; all arrays have one entry per candidate.
 
     Parameters
     ----------
+    names, owner
+        Names of branches, buses or resources, and the position of each candidate's among them.
+    direction
+        One for all, or True where it is ``"forward"`` and False where it is ``"reverse"``.
     slack : (n,)
         Distance to the limit, in internal units; negative where the limit gave way.
+    angle_gain : (n,) or None
+        Derivative of the constrained quantity along the angle of the owner, a branch; ``None`` where it does not
+        turn with an angle.
+    gave_way : (n,) or None
+        True where the limit gave way at a penalty.
     """
     threshold = np.maximum(tolerances.active_slack_mw / base_mva, tolerances.active_slack_relative * np.abs(limit))
     shown: IntArray = np.flatnonzero((multiplier / to_unit > tolerances.shadow_price) | (slack <= threshold))
+    if isinstance(direction, str):
+        directions: tuple[str, ...] = (direction,) * shown.size
+    else:
+        directions = tuple("forward" if forward else "reverse" for forward in direction[shown].tolist())
+    at = (np.arange(shown.size), owner[shown])
+    gain = np.zeros(0) if angle_gain is None else angle_gain[shown]
     return ConstraintRows(
         kind=(kind,) * shown.size,
         contingency=("",) * shown.size,
-        monitored=tuple(monitored[i] for i in shown.tolist()),
-        direction=tuple(direction[i] for i in shown.tolist()),
+        monitored=tuple(names[i] for i in owner[shown].tolist()),
+        direction=directions,
         unit=(unit,) * shown.size,
         to_unit=np.full(shown.size, to_unit),
         limit=limit[shown],
         value=value[shown],
         multiplier=np.maximum(multiplier[shown], 0.0),
-        angle_gain=sparse.csr_array(angle_gain[shown]),
-        at_penalty=np.zeros(shown.size, dtype=bool) if at_penalty is None else at_penalty[shown],
+        angle_gain=sparse.csr_array((shown.size, n_branch))
+        if angle_gain is None
+        else sparse.csr_array((gain, at), shape=(shown.size, n_branch)),
+        at_penalty=np.zeros(shown.size, dtype=bool) if gave_way is None else gave_way[shown],
     )
 
 
@@ -81,10 +100,10 @@ def flow_limit_rows(
     shown: IntArray = np.flatnonzero((multiplier / base_mva > tolerances.shadow_price) | (slack <= threshold))
     gave_way = at_penalty(multiplier, excess, penalty, tolerances, base_mva)
     return ConstraintRows(
-        kind=tuple(flow_limits.kind[i] for i in shown),
-        contingency=tuple(flow_limits.contingency[i] for i in shown),
-        monitored=tuple(flow_limits.monitored[i] for i in shown),
-        direction=tuple(flow_limits.direction[i] for i in shown),
+        kind=tuple(flow_limits.kind[i] for i in shown.tolist()),
+        contingency=tuple(flow_limits.contingency[i] for i in shown.tolist()),
+        monitored=tuple(flow_limits.monitored[i] for i in shown.tolist()),
+        direction=tuple(flow_limits.direction[i] for i in shown.tolist()),
         unit=("MW",) * shown.size,
         to_unit=np.full(shown.size, base_mva),
         limit=flow_limits.limit[shown],
@@ -101,7 +120,7 @@ def at_penalty(
     penalty: float | None,
     tolerances: Tolerances,
     base_mva: float,
-) -> np.ndarray:
+) -> BoolArray:
     """Return True where a soft limit gave way or its shadow price stands at the penalty, shape (n,).
 
     Parameters
@@ -118,8 +137,3 @@ def at_penalty(
     price = multiplier / base_mva
     stands = np.abs(price - penalty) <= tolerances.penalty_match * abs(penalty)
     return np.asarray(stands | (excess > tolerances.active_slack_mw / base_mva))
-
-
-def branch_gain(branch: IntArray, gain: FloatArray, n_branch: int) -> sparse.csr_array:
-    """Return one row per entry with its gain at its own branch, shape (n, n_branch)."""
-    return sparse.csr_array((gain, (np.arange(branch.size), branch)), shape=(branch.size, n_branch))

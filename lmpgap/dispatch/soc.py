@@ -174,7 +174,8 @@ class SocDispatch(ConvexDispatch):
             q=solution.x[template.variables["q"]].copy(),
             multipliers=multipliers,
             constraints=soc_constraints(network, model, program, solution, inputs, flow_limits, point, self.options),
-            fictitious_loss=float(np.sum(r * (value["current"] / z - physical))),
+            # |r|: behind a negative resistance a slack cone makes power instead of burning it.
+            fictitious_loss=float(np.sum(np.abs(r) * (value["current"] / z - physical))),
             changes={
                 "relaxed": True,
                 "cone_slack": float(np.max((value["current"] / z - physical) * value["u"], initial=0.0)),

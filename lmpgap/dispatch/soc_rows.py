@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import numpy as np
-from scipy import sparse
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexModel
@@ -11,7 +10,7 @@ from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, branch_gain, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
 from lmpgap.dispatch.supply import rated_branches
 from lmpgap.scenario.network import FloatArray, IntArray, IntervalInputs, Network
 
@@ -73,10 +72,9 @@ def _thermal(
     """Ratings at both ends; the direction is that of the active flow at the from end, so that both ends share a key."""
     template, base = model.template, network.base_mva
     rated = model.live.branch[rated_branches(model.live)]
-    direction = ["forward" if p >= 0.0 else "reverse" for p in point.p_from[rated]]
     head = {end: solution.cone_dual[template.cones[f"thermal {end}"]][::3] for end in ("from", "to")}
     excess = template.variables.get("excess")
-    gave_way = at_penalty(
+    soft = at_penalty(
         head["from"] + head["to"],
         None if excess is None else solution.x[excess],
         options.penalties.transmission,
@@ -95,18 +93,20 @@ def _thermal(
         parts.append(
             constraint_rows(
                 kind="thermal",
-                monitored=[network.branches[k] for k in rated],
-                direction=direction,
+                names=network.branches,
+                owner=rated,
+                direction=point.p_from[rated] >= 0.0,
                 unit="MVA",
                 to_unit=base,
                 limit=limit,
                 value=size,
                 slack=limit - size,
                 multiplier=head[end],
-                angle_gain=branch_gain(rated, gain, network.n_branch),
+                angle_gain=gain,
+                n_branch=network.n_branch,
                 tolerances=options.tolerances,
                 base_mva=base,
-                at_penalty=gave_way & ((head[end] > options.tolerances.shadow_price * base) | (size >= limit)),
+                gave_way=soft & ((head[end] > options.tolerances.shadow_price * base) | (size >= limit)),
             )
         )
     return parts
@@ -131,15 +131,17 @@ def _angle(
         parts.append(
             constraint_rows(
                 kind="angle",
-                monitored=[network.branches[k] for k in branch],
-                direction=(side,) * branch.size,
+                names=network.branches,
+                owner=branch,
+                direction=side,
                 unit="deg",
                 to_unit=180.0 / np.pi,
                 limit=limit[branch],
                 value=value,
                 slack=sign * (limit[branch] - value),
                 multiplier=solution.inequality_dual[model.template.inequalities[f"angle {side}"]] * steepness,
-                angle_gain=branch_gain(branch, np.full(branch.size, sign), network.n_branch),
+                angle_gain=np.full(branch.size, sign),
+                n_branch=network.n_branch,
                 tolerances=options.tolerances,
                 base_mva=network.base_mva,
             )
@@ -160,15 +162,17 @@ def _voltage(
     return [
         constraint_rows(
             kind="voltage",
-            monitored=[network.buses[i] for i in bus],
-            direction=(side,) * bus.size,
+            names=network.buses,
+            owner=bus,
+            direction=side,
             unit="pu",
             to_unit=1.0,
             limit=limit[bus],
             value=magnitude,
             slack=sign * (limit[bus] - magnitude),
             multiplier=dual[where] * 2.0 * magnitude,
-            angle_gain=sparse.csr_array((bus.size, network.n_branch)),
+            angle_gain=None,
+            n_branch=network.n_branch,
             tolerances=options.tolerances,
             base_mva=network.base_mva,
         )
@@ -201,15 +205,17 @@ def _reactive(
         parts.append(
             constraint_rows(
                 kind="reactive",
-                monitored=[network.resources[i] for i in on],
-                direction=(side,) * on.size,
+                names=network.resources,
+                owner=on,
+                direction=side,
                 unit="Mvar",
                 to_unit=base,
                 limit=limit[on],
                 value=q[on],
                 slack=sign * (limit[on] - q[on]),
                 multiplier=dual[on],
-                angle_gain=sparse.csr_array((on.size, network.n_branch)),
+                angle_gain=None,
+                n_branch=network.n_branch,
                 tolerances=options.tolerances,
                 base_mva=base,
             )
