@@ -302,7 +302,7 @@ class DispatchResult:
         True when the model is a relaxation of the network: its voltages and flows need not belong to any set of
         angles, and its price needs an AC check before it is used.
     cone_slack : float
-        Largest slack of a relaxed cone [pu]; zero where there is none.
+        Largest w_f w_t - |W|^2 of a branch, behind its transformer [pu]; zero where nothing is relaxed.
     loop_angle_deg : float
         Largest angle sum around a loop of the relaxed products [deg]; zero where angles are variables.
     loss_slack_open : bool

@@ -178,7 +178,7 @@ class SocDispatch(ConvexDispatch):
             fictitious_loss=float(np.sum(np.abs(r) * (value["current"] / z - physical))),
             changes={
                 "relaxed": True,
-                "cone_slack": float(np.max((value["current"] / z - physical) * value["u"], initial=0.0)),
+                "cone_slack": float(np.max(z**2 * (value["current"] / z - physical) * value["u"], initial=0.0)),
                 "loop_angle_deg": loop_angle_deg,
             },
         )
