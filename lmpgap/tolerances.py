@@ -70,7 +70,7 @@ class Tolerances:
     exact_gap: float = 1e-5
     """Cost gap to the AC local optimum up to which a relaxation is exact [-] (0.001 %)."""
     exact_loop_deg: float = 0.01
-    """Largest angle sum around a loop of an exact relaxation [deg]."""
+    """Largest angle by which a branch of an exact relaxation misses the angles fitted to all of them [deg]."""
     exact_mismatch_mw: float = 0.01
     """Largest AC mismatch of an exact relaxation [MW]."""
     exact_overload: float = 1e-4

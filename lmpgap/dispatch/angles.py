@@ -31,7 +31,8 @@ def recover_angles(
     angle : (n_bus,)
         [rad]; zero at the first bus of each island.
     loop_angle_deg : float
-        Largest angle sum around a loop that one branch closes with the tree [deg].
+        Largest angle by which a branch misses the fitted angles of its ends [deg]: what the loops leave open, as the
+        fit spreads it over their branches. Zero if and only if the angles around every loop add up.
     """
     magnitude = np.hypot(c, s)
     used = np.flatnonzero(branch_in_service & (magnitude > 0.0))
@@ -65,7 +66,8 @@ def recover_angles(
     angle = splu(sparse.csc_matrix(normal + sparse.diags_array(hold))).solve(
         difference_of.T @ (weight * (expected + closing))
     )
-    return angle, float(np.rad2deg(np.abs(closing).max()))
+    left_open = _wrapped(difference - difference_of @ angle)
+    return angle, float(np.rad2deg(np.abs(left_open).max()))
 
 
 def _wrapped(angle: FloatArray) -> FloatArray:

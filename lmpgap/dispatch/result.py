@@ -304,7 +304,8 @@ class DispatchResult:
     cone_slack : float
         Largest w_f w_t - |W|^2 of a branch, behind its transformer [pu]; zero where nothing is relaxed.
     loop_angle_deg : float
-        Largest angle sum around a loop of the relaxed products [deg]; zero where angles are variables.
+        Largest angle by which the relaxed products miss the angles that fit them best [deg]: what loops leave open;
+        zero where angles are variables.
     loss_slack_open : bool
         True when a relaxed loss had to be replaced by frozen factors.
     frozen : FrozenFactors or None

@@ -57,7 +57,7 @@ class Certificate:
     cone_slack : float
         Largest slack of a relaxed cone [pu]; ``nan`` where nothing is relaxed.
     loop_angle_deg : float
-        Largest angle sum around a loop of a relaxation [deg]; ``nan`` where nothing is relaxed.
+        Largest angle that the loops of a relaxation leave open at a branch [deg]; ``nan`` where nothing is relaxed.
     cost_gap : float
         (AC cost - cost) / |AC cost| [-]; ``nan`` without an AC dispatch of the same interval.
     ac_mismatch_mw : float

@@ -40,7 +40,7 @@ def relaxation_verdict(
     cost_gap
         (AC cost - relaxed cost) / AC cost [-]; ``None`` without an AC dispatch.
     loop_angle_deg
-        Largest angle sum around a loop [deg].
+        Largest angle that the loops leave open at a branch [deg].
     tolerances
         ``exact_*`` and ``close_*``.
 
@@ -76,7 +76,7 @@ def relaxation_verdict(
             reasons.append(f"the dispatch misses the AC balance by {check.mismatch_mw:.3g} MW")
     if not loop_angle_deg <= tolerances.exact_loop_deg:
         exact = False
-        reasons.append(f"angles do not close: {loop_angle_deg:.3g} deg around a loop")
+        reasons.append(f"angles do not close around loops: {loop_angle_deg:.3g} deg are left at a branch")
     if cost_gap is None:
         contradicted = check is not None and check.converged and not close
         reasons.append("there is no AC dispatch to compare the cost with")
