@@ -12,9 +12,11 @@ from __future__ import annotations
 
 import warnings
 from dataclasses import dataclass
+from typing import Any
 
-import cvxpy as cp
+import cvxpy
 import numpy as np
+from numpy.typing import NDArray
 from scipy import sparse
 
 from lmpgap.dispatch.limits import FlowLimits
@@ -22,6 +24,8 @@ from lmpgap.dispatch.result import SolveStatus
 from lmpgap.errors import LmpgapError
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 from lmpgap.scenario.settings import DcConvention
+
+cp: Any = cvxpy  # its functions are exported without types
 
 _SCALE = 1e-3
 """Dollars are divided by a thousand, as an interior-point solver likes them."""
@@ -92,7 +96,7 @@ def restate_dc(network: Network, inputs: IntervalInputs, limits: FlowLimits, con
     balance = injection - ends.T @ flow == inputs.load_p + network.shunt_g
     rated = np.isfinite(network.normal_rating) & inputs.branch_in_service
     constraints += [balance, cp.abs(flow[rated]) <= network.normal_rating[rated]]
-    constraints += _angle_band(network, inputs, ends @ theta) + [limits.weights @ flow <= limits.limit]
+    constraints += [*_angle_band(network, inputs, ends @ theta), limits.weights @ flow <= limits.limit]
     return _solved(network, cost, constraints, balance, p)
 
 
@@ -137,7 +141,9 @@ def restate_soc(network: Network, inputs: IntervalInputs, limits: FlowLimits) ->
     own = np.conj(y) - 0.5j * network.charging[on]
     across_from, across_to = -np.conj(y) / ratio, -np.conj(y) / np.conj(ratio)
 
-    def power(self_admittance: np.ndarray, square: cp.Expression, mutual: np.ndarray, sign: float) -> tuple:
+    def power(
+        self_admittance: NDArray[np.complex128], square: Any, mutual: NDArray[np.complex128], sign: float
+    ) -> tuple[Any, Any]:
         # S = self w + mutual (c + sign j s)
         active = cp.multiply(self_admittance.real, square) + cp.multiply(mutual.real, c)
         reactive = cp.multiply(self_admittance.imag, square) + cp.multiply(mutual.imag, c)
@@ -185,9 +191,7 @@ def restate_soc(network: Network, inputs: IntervalInputs, limits: FlowLimits) ->
     return _solved(network, cost, constraints, balance, p)
 
 
-def _market(
-    network: Network, inputs: IntervalInputs
-) -> tuple[cp.Expression, cp.Expression, cp.Expression, list[cp.Constraint]]:
+def _market(network: Network, inputs: IntervalInputs) -> tuple[Any, Any, Any, list[Any]]:
     """Return injection per bus, cost [$/h], output per resource, and the bounds of offers and bids."""
     segments, bids, base = inputs.segments, inputs.bids, network.base_mva
     output, served = cp.Variable(segments.resource.size), cp.Variable(bids.bus.size)
@@ -231,7 +235,7 @@ def _ends(network: Network) -> sparse.csr_array:
     return sparse.csr_array(network.from_incidence() - network.to_incidence())
 
 
-def _angle_band(network: Network, inputs: IntervalInputs, difference: cp.Expression) -> list[cp.Constraint]:
+def _angle_band(network: Network, inputs: IntervalInputs, difference: Any) -> list[Any]:
     upper = inputs.branch_in_service & np.isfinite(network.angle_max)
     lower = inputs.branch_in_service & np.isfinite(network.angle_min)
     return [difference[upper] <= network.angle_max[upper], difference[lower] >= network.angle_min[lower]]
@@ -239,10 +243,10 @@ def _angle_band(network: Network, inputs: IntervalInputs, difference: cp.Express
 
 def _solved(
     network: Network,
-    cost: cp.Expression,
-    constraints: list[cp.Constraint],
-    balance: cp.Constraint,
-    p: cp.Expression,
+    cost: Any,
+    constraints: list[Any],
+    balance: Any,
+    p: Any,
 ) -> Restated:
     """Solve and return prices: in a minimisation the price is minus the multiplier of generation - load = 0."""
     problem = cp.Problem(cp.Minimize(_SCALE * cost), constraints)
