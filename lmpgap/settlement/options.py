@@ -7,6 +7,7 @@ from dataclasses import asdict, dataclass, fields
 from typing import Any, Literal
 
 from lmpgap.errors import DataError, Fault
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.tolerances import DEFAULT_TOLERANCES
 
 Basis = Literal["delivery-factor", "loss"]
@@ -70,7 +71,7 @@ class SettlementOptions:
     materiality: float = 0.0
     rounding: float = DEFAULT_TOLERANCES.posted_rounding
     operating_points: tuple[str, ...] = ("ac", "dc-loss")
-    usable_verdicts: tuple[str, ...] = ("certified", "exact", "close")
+    usable_verdicts: tuple[str, ...] = USABLE_VERDICTS
     minimum_coverage: float = 0.5
     relaxation_price_error: float = 0.04
     smallest_energy: float = 1.0

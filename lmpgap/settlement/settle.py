@@ -183,11 +183,12 @@ def settle(
         part = involved[first : first + size]
         return Chunk.of(scenario, basket, part, prices, solves, posted, chosen, held)
 
-    if claim == POSTED and chosen.posted_reference == "auto":
+    if claim == POSTED:
         evidence = ReferenceEvidence(agreeing=0, compared=0)
         for first in range(0, len(involved), size):
             evidence += chunk_at(first).evidence(against)
-        chosen = replace(chosen, posted_reference="scenario" if evidence.on_scenario else "unknown")
+        if chosen.posted_reference == "auto":
+            chosen = replace(chosen, posted_reference="scenario" if evidence.on_scenario else "unknown")
         collected.evidence = evidence
     progress(TASK, 0, len(involved))
     for first in range(0, len(involved), size):
@@ -217,7 +218,7 @@ def settle(
         rule=rule,
         today=today,
         deadlines=_deadlines(rows, chosen, rule, today, scenario.settings.time_zone, posted),
-        notes=_notes(collected, claim, against, held),
+        notes=_notes(collected, chosen, claim, against, held),
     )
     if write:
         run.write("settlement", settlement.table)
@@ -321,6 +322,7 @@ def _deadlines(
 
 def _notes(
     collected: Collected,
+    options: SettlementOptions,
     claim: str,
     against: str,
     held: Sequence[str],
@@ -330,7 +332,7 @@ def _notes(
         seen = collected.evidence
         taken = (
             "they are taken as published"
-            if seen.on_scenario
+            if options.posted_reference == "scenario"
             else "both sides are moved to the scenario's reference before they are compared"
         )
         notes.append(
