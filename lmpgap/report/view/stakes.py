@@ -1,0 +1,186 @@
+"""Money: what accounts may claim, what load would pay, findings of the posted-price checks."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+
+from lmpgap.report.text import NO_VALUE, number
+from lmpgap.report.view.cube import POSTED, PriceCube
+from lmpgap.report.view.hours import Hours
+from lmpgap.report.view.model import AccountTotal, Table
+from lmpgap.report.view.nodes import Nodes
+from lmpgap.scenario.network import FloatArray
+
+_ROWS = 30
+
+
+def account_totals(settlement: pd.DataFrame, component: str = "loss") -> tuple[AccountTotal, ...]:
+    """Return each account's week total of one component, the largest size first.
+
+    ``component`` is matched at the start of the table's wording, so that ``loss`` finds ``loss_component`` too;
+    all rows count where no row bears it.
+    """
+    if settlement.empty:
+        return ()
+    chosen = settlement[settlement["component"].astype(str).str.startswith(component)]
+    frame = chosen if len(chosen) else settlement
+    sums = frame.assign(account=frame["account"].astype(str)).groupby("account")[
+        ["amount", "amount_low", "amount_high"]
+    ]
+    totals = sums.sum(min_count=1)
+    figures = totals.to_numpy(dtype=float)
+    names = [str(account) for account in totals.index]
+    return tuple(
+        AccountTotal(
+            account=names[row],
+            amount=float(figures[row, 0]),
+            low=float(figures[row, 1]),
+            high=float(figures[row, 2]),
+        )
+        for row in np.argsort(-np.abs(figures[:, 0]), kind="stable")
+    )
+
+
+def stakes_table(accounts: tuple[AccountTotal, ...], currency: str) -> Table:
+    """Return what each account has at stake in the loss component, with its interval."""
+    rows = tuple(
+        (
+            total.account,
+            number(total.amount, 0, signed=True),
+            number(total.low, 0, signed=True),
+            number(total.high, 0, signed=True),
+            "charged too much" if total.low > 0 else "charged too little" if total.high < 0 else "not certain",
+        )
+        for total in accounts[:_ROWS]
+    )
+    return Table(
+        caption=f"Loss component, posted against recomputed, {currency} over the week",
+        columns=("Account", "At stake", "At least", "At most", "Reading"),
+        numeric=(False, True, True, True, False),
+        rows=rows,
+        note=(
+            "Positive: the posted prices charged the account more than the recomputed loss components would. "
+            "The interval covers rounding, price intervals, relaxation gap and choice of operating point."
+        ),
+    )
+
+
+def exposure_table(
+    cube: PriceCube, operating_point: pd.DataFrame, nodes: Nodes, hours: Hours, currency: str, interval_hours: float
+) -> Table:
+    """Return what the served load would pay under each price set, against AC (or the fullest) prices."""
+    rows: list[tuple[str, ...]] = []
+    base = "ac" if "ac" in cube.sets else cube.formulations[-1]
+    load = _load_matrix(operating_point, base, nodes, hours)
+    payments = {name: load * cube.get(name).astype(float) * interval_hours for name in cube.sets}
+    for name in cube.sets:
+        both = np.isfinite(payments[name]) & np.isfinite(payments[base])
+        paid = float(payments[name][both].sum())
+        gap = payments[name][both] - payments[base][both]
+        rows.append(
+            (
+                name,
+                number(paid, 0) if both.any() else NO_VALUE,
+                number(float(gap.sum()), 0, signed=True) if name != base else "",
+                number(float(np.abs(gap).sum()), 0) if name != base else "",
+                f"{int(both.sum()):,}",
+            )
+        )
+    if not load.any():
+        rows = []
+    return Table(
+        caption=f"What load would pay under each price set, {currency} over the week",
+        columns=("Price set", "Load pays", f"More than under {base}", "Shifted between buses and hours", "Bus-hours"),
+        numeric=(False, True, True, True, True),
+        rows=tuple(rows),
+        note=f"Load as served in {base}; sums over bus-hours that both price sets cover.",
+    )
+
+
+def _load_matrix(operating_point: pd.DataFrame, formulation: str, nodes: Nodes, hours: Hours) -> FloatArray:
+    load = np.zeros((nodes.n, hours.n))
+    if operating_point.empty:
+        return load
+    part = operating_point[operating_point["formulation"].astype(str) == formulation]
+    row, column = nodes.position(part["bus"]), hours.position(part["interval_start"])
+    known = (row >= 0) & (column >= 0)
+    load[row[known], column[known]] = part["load_mw"].to_numpy(dtype=float)[known]
+    return np.nan_to_num(load)
+
+
+FINDING_WORDS = {
+    "identity": "Components do not add up",
+    "sign": "Congestion with the other sign",
+    "stale-factors": "Delivery factors stand still",
+    "unexplained-congestion": "Congestion no constraint explains",
+    "reversed-constraint": "Constraint with its direction reversed",
+    "unknown-node": "Node that the scenario does not know",
+    "missing-interval": "Interval without posted prices",
+    "repeated-interval": "Interval posted twice",
+    "revised": "Price revised after publication",
+}
+
+
+def findings_table(findings: pd.DataFrame, hours: Hours) -> Table:
+    """Return the findings by kind: how many, where first, and the sentence of the largest."""
+    rows = []
+    if not findings.empty:
+        frame = findings.assign(
+            place=hours.position(findings["interval_start"]),
+            size=pd.to_numeric(findings["amount"], errors="coerce").abs(),
+        )
+        for kind, part in frame.groupby("kind", sort=False, observed=True):
+            worst = part.iloc[int(np.nan_to_num(part["size"].to_numpy(dtype=float), nan=-1.0).argmax())]
+            amount = pd.to_numeric(worst["amount"], errors="coerce")
+            unit = "" if pd.isna(worst["unit"]) else str(worst["unit"])
+            rows.append(
+                (
+                    FINDING_WORDS.get(str(kind), str(kind)),
+                    f"{len(part):,}",
+                    f"{part['node'].replace('', np.nan).nunique()}",
+                    f"{part.loc[part['place'] >= 0, 'place'].nunique()}",
+                    f"{number(float(amount))} {unit}".strip() if pd.notna(amount) else "",
+                    hours.label[int(worst["place"])] if worst["place"] >= 0 else "whole week",
+                    str(worst["sentence"]),
+                )
+            )
+    return Table(
+        caption="What the checks of the posted prices found",
+        columns=("Finding", "Rows", "Nodes", "Intervals", "Largest", "in hour", "In words"),
+        numeric=(False, True, True, True, True, False, False),
+        rows=tuple(rows),
+    )
+
+
+def settlement_table(settlement: pd.DataFrame, currency: str) -> Table:
+    """Return money by account and component, posted against recomputed."""
+    rows = []
+    if not settlement.empty:
+        sums = settlement.assign(
+            account=settlement["account"].astype(str), component=settlement["component"].astype(str)
+        ).groupby(["account", "component"], sort=False)
+        for (account, component), part in sums:
+            rows.append(
+                (
+                    str(account),
+                    str(component).replace("_", " "),
+                    number(float(part["mw"].abs().sum()), 0),
+                    number(float(part["amount"].sum()), 0, signed=True),
+                    number(float(part["amount_low"].sum()), 0, signed=True),
+                    number(float(part["amount_high"].sum()), 0, signed=True),
+                )
+            )
+    shown = rows[: 4 * _ROWS]
+    return Table(
+        caption=f"Settlement by account and component, {currency} over the week",
+        columns=("Account", "Component", "Rows' MW, summed", "Posted less recomputed", "At least", "At most"),
+        numeric=(False, False, True, True, True, True),
+        rows=tuple(shown),
+        note=f"{len(shown)} of {len(rows)}; withdrawal pays, injection is paid." if rows else "",
+    )
+
+
+def has_posted(cube: PriceCube) -> bool:
+    """Return whether posted prices take part."""
+    return POSTED in cube.sets
