@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 import numpy as np
-from scipy import sparse
 
 from lmpgap.scenario.network import Contingencies, FloatArray, Interfaces, Network
 from lmpgap.scenario.typed import ColumnTable
@@ -50,7 +49,7 @@ def build_network(
         q_min=_limit(resources.number("q_min_mvar"), -np.inf) / base_mva,
         q_max=_limit(resources.number("q_max_mvar"), np.inf) / base_mva,
         interfaces=_build_interfaces(tables["interfaces"], positions),
-        contingencies=_build_contingencies(tables, positions["branch"]),
+        contingencies=build_contingencies(tables, positions["branch"]),
     )
 
 
@@ -66,6 +65,8 @@ def _build_interfaces(table: ColumnTable, positions: Mapping[str, Mapping[str, i
     names = tuple(positions["interface"])
     if not names:
         return None
+    from scipy import sparse
+
     weights = sparse.coo_array(
         (
             table.number("weight"),
@@ -79,9 +80,8 @@ def _build_interfaces(table: ColumnTable, positions: Mapping[str, Mapping[str, i
     return Interfaces(names=names, weights=sparse.csr_array(weights))
 
 
-def _build_contingencies(
-    tables: Mapping[str, ColumnTable], branch_positions: Mapping[str, int]
-) -> Contingencies | None:
+def build_contingencies(tables: Mapping[str, ColumnTable], branch_positions: Mapping[str, int]) -> Contingencies | None:
+    """Return the contingencies and where they are checked, or ``None`` without any."""
     table = tables["contingencies"]
     names = _distinct(table, "contingency")
     if not names:

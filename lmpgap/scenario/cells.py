@@ -6,13 +6,11 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
-import pyarrow as pa
-import pyarrow.compute as pc
 
 from lmpgap.scenario.columns import Column
 from lmpgap.scenario.faults import FaultLog, as_rows
 from lmpgap.scenario.network import BoolArray
-from lmpgap.scenario.typed import Lines, TextColumn
+from lmpgap.scenario.typed import Lines, RawColumn, TextColumn
 
 
 @dataclass(frozen=True)
@@ -49,39 +47,27 @@ class Place:
             self.report(column, "empty", blank, "is empty", None)
 
 
-def as_text(array: pa.Array) -> pa.Array:
-    """Return trimmed text, missing values as empty text; ``None`` in the array's place is not possible."""
-    kind = array.type
-    if pa.types.is_dictionary(kind):
-        array = array.cast(kind.value_type)
-        kind = array.type
-    if pa.types.is_floating(kind):
-        # A whole number stored as a float (a column with gaps) is the name "1", not "1.0".
-        values = [
-            None
-            if v is None or v != v
-            else (str(int(v)) if v == int(v) else repr(v))
-            if abs(v) != float("inf")
-            else str(v)
-            for v in array.to_pylist()
-        ]
-        array = pa.array(values, type=pa.string())
-    elif pa.types.is_binary(kind) or pa.types.is_large_binary(kind):
-        array = pa.array([None if v is None else v.decode("utf-8", "replace") for v in array.to_pylist()], pa.string())
-    elif not pa.types.is_string(kind):
-        try:
-            array = array.cast(pa.string())
-        except (pa.ArrowException, ValueError):
-            array = pa.array([None if v is None else str(v) for v in array.to_pylist()], type=pa.string())
-    return pc.utf8_trim_whitespace(pc.fill_null(array, ""))
+def as_text(column: RawColumn) -> TextColumn:
+    """Return a raw column as trimmed text by distinct value; what is missing is empty text.
+
+    Numbers, times and flags of a Parquet file become text as a CSV file would hold it: a whole number that is
+    stored as a float, because the column has gaps, is the name "1" and not "1.0".
+    """
+    if isinstance(column, TextColumn):
+        return column
+    if column.dtype.kind == "M":
+        distinct, codes = np.unique(column, return_inverse=True)
+        texts = ["" if np.isnat(time) else f"{time}+00:00" for time in distinct]
+    else:
+        distinct, codes = np.unique(column, return_inverse=True)
+        texts = [_number_text(float(number)) if column.dtype.kind == "f" else str(number) for number in distinct]
+    return TextColumn(np.asarray(codes, dtype=np.int64).reshape(-1), tuple(texts)).trimmed()
 
 
-def distinct_text(array: pa.Array) -> TextColumn:
-    """Return an Arrow column of any type as trimmed text by distinct value."""
-    encoded = pc.dictionary_encode(as_text(array))
-    return TextColumn(
-        encoded.indices.to_numpy(zero_copy_only=False).astype(np.int64), tuple(encoded.dictionary.to_pylist())
-    )
+def _number_text(number: float) -> str:
+    if number != number:
+        return ""
+    return str(int(number)) if abs(number) < 2**53 and number == int(number) else repr(number)
 
 
 def flags_of(text: TextColumn, bad: list[bool]) -> BoolArray:

@@ -11,20 +11,27 @@ import csv
 import hashlib
 import io
 import stat
+from collections import defaultdict
+from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import islice
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
-import pyarrow as pa
-import pyarrow.csv
 
 from lmpgap.scenario.faults import FaultLog, clip_text, suggestion
 from lmpgap.scenario.network import IntArray
 from lmpgap.scenario.tables import TABLES
-from lmpgap.scenario.typed import Lines, row_numbers
+from lmpgap.scenario.typed import Lines, RawColumn, TextColumn, row_numbers
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 FORMATS = (".csv", ".parquet")
 _DELIMITERS = {",": "commas", ";": "semicolons", "\t": "tabs"}
+_CHUNK = 50_000
+"""Rows that are taken apart at a time: their texts are coded before the next ones are read, to save memory."""
 
 
 @dataclass(frozen=True)
@@ -38,7 +45,7 @@ class RawTable:
     names
         Headers, trimmed.
     columns
-        One Arrow array per header; text for CSV.
+        One per header; text for CSV.
     lines
         Line numbers of rows.
     comma_decimals
@@ -47,7 +54,7 @@ class RawTable:
 
     file: str
     names: tuple[str, ...]
-    columns: tuple[pa.Array, ...]
+    columns: tuple[RawColumn, ...]
     lines: Lines
     comma_decimals: bool = False
 
@@ -129,154 +136,152 @@ def decode(file: str, content: bytes, log: FaultLog) -> str | None:
 
 
 def _read_csv(file: str, text: str, log: FaultLog) -> RawTable | None:
-    header_end = _header_end(text)
-    if header_end is None:
+    header = _first_line(text)
+    if header is None:
         log.fault(file, "is empty: not even a header")
         return None
-    header = text[:header_end].strip("\n")
-    # Comma first: a header in the contract's own names decides, whatever stands in the rows.
+    # Comma first: it decides where several marks are there equally often.
     delimiter = max(_DELIMITERS, key=lambda mark: (header.count(mark), mark == ","))
-    if '"' not in text:
-        table = _read_plain(file, text, header_end, delimiter)
-        if table is not None:
-            return table
-    return _read_quoted(file, text, delimiter, log)
-
-
-def _header_end(text: str) -> int | None:
-    """Return the position after the first line that is not blank."""
-    start = 0
-    while start < len(text):
-        end = text.find("\n", start)
-        end = len(text) if end < 0 else end
-        if text[start:end].strip():
-            return end
-        start = end + 1
-    return None
-
-
-def _split_header(line: str, delimiter: str) -> tuple[str, ...]:
-    return tuple(name.strip() for name in line.split(delimiter))
-
-
-def _read_plain(file: str, text: str, header_end: int, delimiter: str) -> RawTable | None:
-    """Read a file without quotes with Arrow; ``None`` where a row has another number of fields."""
-    header = text[:header_end].split("\n")[-1]
-    names = _split_header(header, delimiter)
-    body = text[header_end + 1 :]
-    labels = [f"c{i}" for i in range(len(names))]
-
-    def lines(rows: IntArray) -> IntArray:
-        filled = [number for number, line in enumerate(text.split("\n"), start=1) if _has_content(line, delimiter)]
-        return np.asarray(filled[1:], dtype=np.int64)[rows]
-
-    if not body.strip():
-        empty = pa.array([], type=pa.string())
-        return RawTable(file, names, (empty,) * len(names), lines, delimiter != ",")
-    data = body.encode()
+    coder = _Coder(file, delimiter, log)
     try:
-        table = pyarrow.csv.read_csv(
-            pa.BufferReader(data),
-            read_options=pyarrow.csv.ReadOptions(
-                column_names=labels, use_threads=False, block_size=max(1 << 20, min(len(data) + 1, 1 << 27))
-            ),
-            parse_options=pyarrow.csv.ParseOptions(delimiter=delimiter, quote_char=False, double_quote=False),
-            convert_options=pyarrow.csv.ConvertOptions(
-                column_types=dict.fromkeys(labels, pa.string()), strings_can_be_null=False
-            ),
-        )
-    except pa.ArrowInvalid:
-        return None
-    columns = [_one_array(table.column(label)) for label in labels]
-    columns = _drop_empty_rows(columns)
-    return RawTable(file, names, tuple(columns), lines, delimiter != ",")
-
-
-def _has_content(line: str, delimiter: str) -> bool:
-    return bool(line.replace(delimiter, "").strip())
-
-
-def _drop_empty_rows(columns: list[pa.Array]) -> list[pa.Array]:
-    """Leave out rows without any content, as spreadsheets write below the table."""
-    import pyarrow.compute as pc
-
-    # Most files have a full first column, which settles it at once.
-    empty = pc.equal(pc.utf8_trim_whitespace(columns[0]), "")
-    for column in columns[1:]:
-        if not pc.any(empty).as_py():
-            return columns
-        empty = pc.and_(empty, pc.equal(pc.utf8_trim_whitespace(column), ""))
-    if not pc.any(empty).as_py():
-        return columns
-    keep = pc.invert(empty)
-    return [column.filter(keep) for column in columns]
-
-
-def _read_quoted(file: str, text: str, delimiter: str, log: FaultLog) -> RawTable | None:
-    """Read a file row by row: quotes, line breaks inside quotes, and rows of the wrong width."""
-    reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
-    names: tuple[str, ...] = ()
-    records: list[list[str]] = []
-    numbers: list[int] = []
-    narrow: list[tuple[int, int]] = []
-    previous = 0
-    try:
-        for record in reader:
-            line, previous = previous + 1, reader.line_num
-            if not any(field.strip() for field in record):
-                continue
-            if not names:
-                names = tuple(name.strip() for name in record)
-            elif len(record) != len(names) and any(field.strip() for field in record[len(names) :] or ["x"]):
-                narrow.append((line, len(record)))
-            else:
-                records.append(record[: len(names)])
-                numbers.append(line)
+        for records in _chunks(text, delimiter):
+            coder.add(records)
     except csv.Error as error:
         reason = str(error)
         if "field larger" in reason or "unexpected end" in reason:
             reason = "a quote is opened and not closed"
-        log.fault(file, f"cannot be taken apart: {reason}", row=previous + 1)
+        log.fault(file, f"cannot be taken apart: {reason}", row=_last_good_line(text, delimiter) + 1)
         return None
-    for line, width in narrow[:1000]:
-        log.fault(
-            file,
-            f"has {width} fields where the header has {len(names)}",
-            row=line,
-            allowed=f"{len(names)} fields separated by {_DELIMITERS[delimiter]}",
-            kind="field count",
+    return coder.table(text)
+
+
+def _first_line(text: str) -> str | None:
+    """Return the first line that is not blank."""
+    return next((line for line in io.StringIO(text) if line.strip()), None)
+
+
+def _reader(text: str, delimiter: str) -> Iterator[list[str]]:
+    return csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
+
+
+def _chunks(text: str, delimiter: str) -> Iterator[list[list[str]]]:
+    reader = _reader(text, delimiter)
+    while records := list(islice(reader, _CHUNK)):
+        yield records
+
+
+def _last_good_line(text: str, delimiter: str) -> int:
+    """Return the line on which the last record before a broken one ends."""
+    reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
+    line = 0
+    try:
+        for _ in reader:
+            line = reader.line_num
+    except csv.Error:
+        pass
+    return line
+
+
+class _Coder:
+    """Takes records in chunks and codes each column's texts."""
+
+    def __init__(self, file: str, delimiter: str, log: FaultLog) -> None:
+        self._file, self._delimiter, self._log = file, delimiter, log
+        self._names: tuple[str, ...] = ()
+        self._index: list[defaultdict[str, int]] = []
+        self._codes: list[list[IntArray]] = []
+        self._seen = 0
+        self._skipped: list[int] = []
+        self._wrong: list[tuple[int, int]] = []
+
+    def add(self, records: list[list[str]]) -> None:
+        """Take the next records of the file, header first."""
+        start = 0
+        while not self._names and start < len(records):
+            if any(field.strip() for field in records[start]):
+                self._names = tuple(name.strip() for name in records[start])
+                for _ in self._names:
+                    index: defaultdict[str, int] = defaultdict()
+                    index.default_factory = index.__len__
+                    self._index.append(index)
+                    self._codes.append([])
+            else:
+                self._skipped.append(self._seen)
+            self._seen += 1
+            start += 1
+        rows = self._usable(records[start:])
+        self._seen += len(records) - start
+        if rows:
+            for index, codes, column in zip(self._index, self._codes, zip(*rows, strict=True), strict=True):
+                codes.append(np.fromiter(map(index.__getitem__, column), np.int64, len(rows)))
+
+    def _usable(self, records: list[list[str]]) -> list[list[str]]:
+        """Return the records as wide as the header; others are noted, rows without content left out."""
+        width = len(self._names)
+        if all(len(record) == width and (record[0] or record[-1]) for record in records):
+            return records
+        usable = []
+        for number, record in enumerate(records, start=self._seen):
+            if not any(field.strip() for field in record):
+                self._skipped.append(number)
+            elif len(record) != width and (len(record) < width or any(field.strip() for field in record[width:])):
+                self._skipped.append(number)
+                self._wrong.append((number, len(record)))
+            else:
+                usable.append(record[:width])
+        return usable
+
+    def table(self, text: str) -> RawTable:
+        """Return the table; rows of the wrong width become faults."""
+        delimiter, skipped = self._delimiter, np.asarray(self._skipped, dtype=np.int64)
+
+        def line_of_record() -> IntArray:
+            reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
+            ends = np.fromiter((reader.line_num for _ in reader), np.int64)
+            # A record starts on the line after the one before it ends.
+            return np.concatenate([[1], ends[:-1] + 1]).astype(np.int64)
+
+        def lines(rows: IntArray) -> IntArray:
+            starts = line_of_record()
+            return np.asarray(np.delete(starts, skipped)[1:][rows])
+
+        if self._wrong:
+            starts = line_of_record()
+            for record, width in self._wrong[:1000]:
+                self._log.fault(
+                    self._file,
+                    f"has {width} fields where the header has {len(self._names)}",
+                    row=int(starts[record]),
+                    allowed=f"{len(self._names)} fields separated by {_DELIMITERS[delimiter]}",
+                    kind="field count",
+                )
+            if len(self._wrong) > 1000:
+                rest = f"and {len(self._wrong) - 1000:,} more rows with another number of fields"
+                self._log.fault(self._file, rest, kind="field count (rest)")
+        columns = tuple(
+            TextColumn(np.concatenate(codes) if codes else np.zeros(0, np.int64), tuple(index)).trimmed()
+            for index, codes in zip(self._index, self._codes, strict=True)
         )
-    if len(narrow) > 1000:
-        log.fault(file, f"and {len(narrow) - 1000:,} more rows with another number of fields", kind="field count")
-    array = np.asarray(numbers, dtype=np.int64)
-    columns = tuple(pa.array([record[i] for record in records], type=pa.string()) for i in range(len(names)))
-    return RawTable(file, names, columns, lambda rows: array[rows], delimiter != ",")
+        return RawTable(self._file, self._names, columns, lines, delimiter != ",")
 
 
 def _read_parquet(file: str, content: bytes, log: FaultLog) -> RawTable | None:
-    from pyarrow import parquet
+    import pyarrow as pa
+
+    from lmpgap.scenario.parquet_file import read_parquet
 
     try:
-        table = parquet.read_table(pa.BufferReader(content))
-    except (pa.ArrowException, OSError, ValueError) as error:
-        log.fault(file, f"is not a readable Parquet file: {clip_text(str(error).splitlines()[0])}")
+        names, columns = read_parquet(content)
+    except (pa.ArrowException, OSError, ValueError, OverflowError) as error:
+        reason = (str(error).splitlines() or ["unknown content"])[0]
+        log.fault(file, f"is not a readable Parquet file: {clip_text(reason)}")
         return None
-    return table_from_arrow(file, table)
+    return RawTable(file, tuple(name.strip() for name in names), tuple(columns), row_numbers)
 
 
 def table_from_arrow(file: str, table: pa.Table) -> RawTable:
-    """Return an Arrow table as raw columns; the row numbers that pandas stores beside the columns are left out."""
-    kept = [i for i, name in enumerate(table.column_names) if not name.startswith("__index_level_")]
-    return RawTable(
-        file,
-        tuple(table.column_names[i].strip() for i in kept),
-        tuple(_one_array(table.column(i)) for i in kept),
-        row_numbers,
-    )
+    """Return an Arrow table as raw columns."""
+    from lmpgap.scenario.parquet_file import columns_of
 
-
-def _one_array(column: pa.ChunkedArray) -> pa.Array:
-    if column.num_chunks == 1:
-        return column.chunk(0)
-    combined = column.combine_chunks()
-    return combined.chunk(0) if isinstance(combined, pa.ChunkedArray) else combined
+    names, columns = columns_of(table)
+    return RawTable(file, tuple(name.strip() for name in names), tuple(columns), row_numbers)

@@ -8,10 +8,13 @@ currency per MWh. Arrays are in the order of the tables; positions are zero-base
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy import sparse
+
+if TYPE_CHECKING:  # scipy.sparse takes a third of a second to import, and `lmpgap check` needs none of it
+    from scipy import sparse
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -143,11 +146,14 @@ class Network:
 
     def islands(self, branch_in_service: BoolArray) -> IntArray:
         """Return the island number of each bus, shape (n_bus,), counting from zero."""
+        from scipy import sparse
+        from scipy.sparse import csgraph
+
         on = np.flatnonzero(branch_in_service)
         links = sparse.coo_array(
             (np.ones(on.size), (self.from_bus[on], self.to_bus[on])), shape=(self.n_bus, self.n_bus)
         )
-        _, label = sparse.csgraph.connected_components(links, directed=False)
+        _, label = csgraph.connected_components(links, directed=False)
         return np.asarray(label, dtype=np.int64)
 
     def with_changes(self, **changes: object) -> Network:
@@ -241,5 +247,7 @@ class IntervalInputs:
 
 def incidence(column: IntArray, n_column: int) -> sparse.csr_array:
     """Return a (len(column), n_column) matrix with a single one per row."""
+    from scipy import sparse
+
     n_row = column.size
     return sparse.csr_array((np.ones(n_row), column.astype(np.int64), np.arange(n_row + 1)), shape=(n_row, n_column))

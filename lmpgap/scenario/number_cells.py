@@ -1,22 +1,23 @@
-"""Reading numbers: as Arrow reads them where every cell is one, else cell by distinct cell."""
+"""Reading numbers: each distinct text once."""
 
 from __future__ import annotations
 
 import re
 from collections.abc import Callable, Mapping
+from dataclasses import replace
 
 import numpy as np
-import pyarrow as pa
-import pyarrow.compute as pc
 
-from lmpgap.scenario.cells import Place, as_text, distinct_text, flags_of
+from lmpgap.scenario.cells import Place, flags_of
 from lmpgap.scenario.columns import Column, Table
-from lmpgap.scenario.faults import FaultLog, as_rows
+from lmpgap.scenario.faults import FaultLog, as_rows, clip_text
 from lmpgap.scenario.files import RawTable
 from lmpgap.scenario.network import BoolArray, FloatArray
+from lmpgap.scenario.typed import RawColumn, TextColumn
 
 _NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?", re.ASCII)
 _COMMA_NUMBER = re.compile(r"[+-]?(\d+,?\d*|,\d+)([eE][+-]?\d+)?", re.ASCII)
+_NOT_FINITE = ("nan", "inf", "infinity")
 _LONGEST = 64
 """Longer text is no number; patterns are not tried on it, for some take very long to fail."""
 _LARGEST = 1e12
@@ -26,95 +27,95 @@ _LARGEST = 1e12
 def with_points(spec: Table, raw: RawTable, where: Mapping[str, int], log: FaultLog) -> RawTable:
     """Return the table with decimal points, where its numbers are written with decimal commas."""
     numeric = [where[c.name] for c in spec.columns if c.kind in ("number", "integer") and c.name in where]
-    if not any(pc.any(pc.match_substring(raw.columns[i], ",")).as_py() for i in numeric):
+    texts = {i: column for i in numeric if isinstance(column := raw.columns[i], TextColumn)}
+    if not any("," in value for column in texts.values() for value in column.values):
         return raw
     columns = list(raw.columns)
-    for i in numeric:
-        column = pc.utf8_trim_whitespace(raw.columns[i])
-        pointed = pc.match_substring(column, ".").to_numpy(zero_copy_only=False)
+    for i, column in texts.items():
+        pointed = ["." in value for value in column.values]
         log.rows(
             raw.file,
             "decimal mark",
-            as_rows(pointed),
+            as_rows(flags_of(column, pointed)),
             raw.lines,
             "has a point in a file that writes decimals with a comma: it may be a thousands separator",
             column=raw.names[i],
-            value=lambda row, column=column: str(column[row].as_py()),  # type: ignore[misc]
+            value=column.at,
             allowed="one decimal mark in the whole file, and no thousands separators",
         )
-        good = pc.and_(pc.match_substring_regex(column, f"^(?:{_COMMA_NUMBER.pattern})$"), pa.array(~pointed))
-        swapped = pc.if_else(good, pc.replace_substring(column, ",", "."), column)
-        # A pointed value already has its fault; zero keeps it from being reported twice.
-        columns[i] = pc.if_else(pa.array(pointed), "0", swapped)
-    return RawTable(raw.file, raw.names, tuple(columns), raw.lines, raw.comma_decimals)
+        # A value with a point has its fault by now; zero keeps it from being reported twice.
+        values = [
+            "0" if point else value.replace(",", ".") if _is_number(value, _COMMA_NUMBER) else value
+            for value, point in zip(column.values, pointed, strict=True)
+        ]
+        columns[i] = TextColumn(column.codes, tuple(values))
+    return replace(raw, columns=tuple(columns))
 
 
-def read_numbers(column: Column, array: pa.Array, place: Place) -> tuple[FloatArray, BoolArray]:
+def _is_number(value: str, pattern: re.Pattern[str] = _NUMBER) -> bool:
+    return len(value) <= _LONGEST and pattern.fullmatch(value) is not None
+
+
+def read_numbers(column: Column, raw: RawColumn, place: Place) -> tuple[FloatArray, BoolArray]:
     """Return the values, ``nan`` for empty cells and for faults, and where the cell was empty."""
-    kind = array.type
-    if pa.types.is_boolean(kind):
-        array, kind = array.cast(pa.int8()), pa.int8()
-    if pa.types.is_integer(kind) or pa.types.is_floating(kind) or pa.types.is_decimal(kind):
-        blank = np.asarray(array.is_null().to_numpy(zero_copy_only=False))
-        values = array.cast(pa.float64(), safe=False).to_numpy(zero_copy_only=False).astype(np.float64)
-        # pandas writes a gap as a null or as nan; both are empty cells.
-        blank = blank | np.isnan(values)
-        text = None
+    if isinstance(raw, TextColumn):
+        distinct = _distinct_numbers(column, raw, place)
+        values = distinct[raw.codes] if distinct.size else np.zeros(0)
+        blank = raw.is_value("")
+        finite_or_told = flags_of(raw, [v.lstrip("+-").casefold() not in _NOT_FINITE for v in raw.values])
+        strange = (np.isinf(values) | ~finite_or_told) & ~blank
+    elif raw.dtype.kind == "M":
+        values, blank = np.full(raw.size, np.nan), np.isnat(raw)
+        strange = np.zeros(raw.size, dtype=bool)
+        place.report(column, "not a number", ~blank, "is a time, not a number", lambda row: str(raw[row]))
     else:
-        trimmed = as_text(array)
-        nulled = pc.if_else(pc.equal(trimmed, ""), None, trimmed)
-        blank = nulled.is_null().to_numpy(zero_copy_only=False)
-        try:
-            values = nulled.cast(pa.float64()).to_numpy(zero_copy_only=False).astype(np.float64)
-            text = trimmed
-        except pa.ArrowInvalid:
-            values, text = _slow_numbers(column, trimmed, blank, place), trimmed
-    not_finite = ~np.isfinite(values) & ~blank
-    reported = np.zeros(values.size, dtype=bool)
-    if text is not None and not_finite.any():
-        # Text that is no number was reported already; what is left is "nan", "inf" and numbers too large.
-        told = pc.match_substring_regex(text, f"^(?:{_NUMBER.pattern})$").to_numpy(zero_copy_only=False)
-        words = pc.match_substring_regex(text, "^[+-]?(nan|inf|infinity)$", ignore_case=True).to_numpy(
-            zero_copy_only=False
-        )
-        reported = not_finite & ~told & ~words
+        values = raw.astype(np.float64)
+        # pandas writes a gap as a null or as nan; both are empty cells.
+        blank = np.isnan(values)
+        strange = np.isinf(values)
 
     def show(row: int) -> str:
-        return str(values[row]) if text is None else str(text[row].as_py())
+        return raw.at(row) if isinstance(raw, TextColumn) else f"{raw[row]:.12g}"
 
     place.report(
         column,
         "not finite",
-        not_finite & ~reported,
+        strange,
         "is not a finite number" if column.required else "is not a finite number; leave the cell empty for none",
         show,
     )
     huge = np.isfinite(values) & (np.abs(values) > _LARGEST)
     place.report(column, "huge", huge, "is too large to be meant", show)
-    values[not_finite | huge] = np.nan
+    values[strange | huge] = np.nan
     place.empty(column, blank)
     _check_range(column, values, place, show)
     return values, blank
 
 
-def _slow_numbers(column: Column, text: pa.Array, blank: BoolArray, place: Place) -> FloatArray:
-    """Return the numbers of a column in which some cell is none, each such cell reported."""
-    distinct = distinct_text(text)
-    parsed = np.full(len(distinct.values), np.nan)
-    bad = [False] * len(distinct.values)
-    for i, value in enumerate(distinct.values):
-        if len(value) <= _LONGEST and _NUMBER.fullmatch(value):
-            parsed[i] = float(value)
-        elif value and value.lstrip("+-").casefold() not in ("nan", "inf", "infinity"):
-            bad[i] = True
+def _distinct_numbers(column: Column, raw: TextColumn, place: Place) -> FloatArray:
+    """Return the number of each distinct text, ``nan`` where it is none; those are reported."""
+    joined = "".join(raw.values)
+    if joined.isascii() and "_" not in joined:
+        # float() takes nothing here that is not meant as a number, once underscores are ruled out.
+        try:
+            return np.asarray([float(value) if value else np.nan for value in raw.values])
+        except ValueError:
+            pass
+    numbers = np.full(len(raw.values), np.nan)
+    bad = [False] * len(raw.values)
+    for i, value in enumerate(raw.values):
+        if _is_number(value):
+            numbers[i] = float(value)
+        else:
+            bad[i] = bool(value) and value.lstrip("+-").casefold() not in _NOT_FINITE
     place.report(
         column,
         "not a number",
-        flags_of(distinct, bad),
-        lambda row: "is not a number" + _number_hint(distinct.at(row)),
-        distinct.at,
+        flags_of(raw, bad),
+        lambda row: "is not a number" + _number_hint(raw.at(row)),
+        lambda row: clip_text(raw.at(row)),
     )
-    return parsed[distinct.codes] if parsed.size else np.zeros(0)
+    return numbers
 
 
 def _number_hint(value: str) -> str:
@@ -126,7 +127,7 @@ def _number_hint(value: str) -> str:
         return "; in a file separated by commas decimals have a point"
     if value.casefold() in ("na", "n/a", "null", "none", "-", "--"):
         return "; leave the cell empty for none"
-    if re.fullmatch(r"[^\d]*[+-]?[\d.,]+[^\d]+", value):
+    if re.match(r"[+-]?\d[\d.]*\s*[a-zA-Z%$]+$", value):
         return "; leave units out"
     return ""
 

@@ -6,10 +6,8 @@ from collections.abc import Callable
 from datetime import UTC, datetime
 
 import numpy as np
-import pyarrow as pa
-import pyarrow.compute as pc
 
-from lmpgap.scenario.cells import Place, distinct_text, flags_of
+from lmpgap.scenario.cells import Place, as_text, flags_of
 from lmpgap.scenario.columns import Column, Table
 from lmpgap.scenario.faults import FaultLog, clip_text, nearest, suggestion
 from lmpgap.scenario.files import RawTable
@@ -18,7 +16,9 @@ from lmpgap.scenario.typed import (
     NOT_A_TIME,
     AnyColumn,
     ColumnTable,
+    RawColumn,
     TextColumn,
+    TimeArray,
     default_column,
 )
 
@@ -86,14 +86,12 @@ def _match_columns(spec: Table, raw: RawTable, log: FaultLog) -> tuple[dict[str,
     return where, complete
 
 
-def _has_values(array: pa.Array) -> bool:
-    if not pa.types.is_string(array.type):
-        return bool(array.null_count < len(array))
-    return bool(pc.any(pc.not_equal(pc.utf8_trim_whitespace(array), "")).as_py())
+def _has_values(raw: RawColumn) -> bool:
+    return not bool(as_text(raw).is_value("").all())
 
 
-def _parse_text(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    text = distinct_text(array)
+def _parse_text(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    text = as_text(raw)
     place.empty(column, text.is_value(""))
     control = flags_of(text, [not value.isprintable() for value in text.values])
     if control.any():
@@ -107,8 +105,8 @@ def _parse_text(column: Column, array: pa.Array, place: Place) -> AnyColumn:
     return text
 
 
-def _parse_choice(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    text = distinct_text(array)
+def _parse_choice(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    text = as_text(raw)
     default = str(column.default or "")
     values, bad = [], []
     for value in text.values:
@@ -131,27 +129,23 @@ def _parse_choice(column: Column, array: pa.Array, place: Place) -> AnyColumn:
     return TextColumn(recode[text.codes] if values else text.codes, distinct)
 
 
-def _parse_flag(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    if pa.types.is_boolean(array.type):
-        default = bool(column.default)
-        return np.asarray(pc.fill_null(array, default).to_numpy(zero_copy_only=False), dtype=bool)
-    text = distinct_text(array)
+def _parse_flag(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    text = as_text(raw)
     values = [_FLAGS.get(value.casefold()) if value else bool(column.default) for value in text.values]
-    values = [{"1.0": True, "0.0": False}.get(text.values[i]) if v is None else v for i, v in enumerate(values)]
     place.empty(column, text.is_value(""))
     place.report(column, "flag", flags_of(text, [v is None for v in values]), "is neither true nor false", text.at)
     return flags_of(text, [bool(v) for v in values])
 
 
-def _parse_number(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    values, blank = read_numbers(column, array, place)
+def _parse_number(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    values, blank = read_numbers(column, raw, place)
     if column.default is not None:
         values[blank] = float(column.default)
     return values
 
 
-def _parse_integer(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    values, blank = read_numbers(column, array, place)
+def _parse_integer(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    values, blank = read_numbers(column, raw, place)
     values[blank] = float(column.default or 0)
     broken = np.isfinite(values) & (values != np.round(values))
     place.report(column, "whole number", broken, "is not a whole number", lambda row: str(values[row]))
@@ -172,10 +166,10 @@ def parse_time(value: str) -> datetime | str:
     return time.astimezone(UTC)
 
 
-def _parse_time(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    if pa.types.is_timestamp(array.type) and array.type.tz is not None:
-        return _parse_timestamps(column, array, place)
-    text = distinct_text(array)
+def _parse_time(column: Column, raw: RawColumn, place: Place) -> AnyColumn:
+    if not isinstance(raw, TextColumn) and raw.dtype.kind == "M":
+        return _check_times(column, raw.astype("M8[us]"), place)
+    text = as_text(raw)
     times = np.full(len(text.values), NOT_A_TIME)
     problems = [""] * len(text.values)
     for i, value in enumerate(text.values):
@@ -196,9 +190,7 @@ def _parse_time(column: Column, array: pa.Array, place: Place) -> AnyColumn:
     return times[text.codes] if text.values else np.zeros(0, dtype="M8[us]")
 
 
-def _parse_timestamps(column: Column, array: pa.Array, place: Place) -> AnyColumn:
-    values = array.cast(pa.timestamp("us", tz="UTC"), safe=False).to_numpy(zero_copy_only=False)
-    times = values.astype("M8[us]")
+def _check_times(column: Column, times: TimeArray, place: Place) -> AnyColumn:
     place.empty(column, np.isnat(times))
     years = times.astype("M8[Y]").astype(np.int64) + 1970
     outside = ~np.isnat(times) & ((years <= _YEARS[0]) | (years >= _YEARS[1]))
@@ -212,7 +204,7 @@ def _parse_timestamps(column: Column, array: pa.Array, place: Place) -> AnyColum
     return np.where(outside, NOT_A_TIME, times)
 
 
-_PARSERS: dict[str, Callable[[Column, pa.Array, Place], AnyColumn]] = {
+_PARSERS: dict[str, Callable[[Column, RawColumn, Place], AnyColumn]] = {
     "text": _parse_text,
     "choice": _parse_choice,
     "flag": _parse_flag,

@@ -13,7 +13,7 @@ import numpy as np
 from lmpgap.scenario.coverage import total_load
 from lmpgap.scenario.faults import FaultLog, as_rows
 from lmpgap.scenario.intervals import IntervalSource
-from lmpgap.scenario.network import BoolArray, FloatArray, Network
+from lmpgap.scenario.network import BoolArray, FloatArray
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.typed import ColumnTable
 
@@ -156,7 +156,6 @@ _RULES: Sequence[_Rule] = (
 
 def check_plausibility(
     tables: Mapping[str, ColumnTable],
-    network: Network,
     source: IntervalSource,
     settings: ScenarioSettings,
     log: FaultLog,
@@ -167,7 +166,7 @@ def check_plausibility(
         values = table.number(rule.column)
         there = np.flatnonzero(np.isfinite(values))
         _warn_rows(table, rule.column, there[as_rows(rule.odd(values[there]))], rule.reason, log)
-    _check_against_each_other(tables, network, source, settings, log)
+    _check_against_each_other(tables, source, settings, log)
 
 
 def _warn_rows(
@@ -189,7 +188,6 @@ def _warn_rows(
 
 def _check_against_each_other(
     tables: Mapping[str, ColumnTable],
-    network: Network,
     source: IntervalSource,
     settings: ScenarioSettings,
     log: FaultLog,

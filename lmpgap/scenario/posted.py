@@ -7,9 +7,8 @@ from dataclasses import replace
 from datetime import datetime
 
 import numpy as np
-import pyarrow as pa
 
-from lmpgap.scenario.cells import as_text, distinct_text
+from lmpgap.scenario.cells import as_text
 from lmpgap.scenario.clock import ClockRule, Resolved, resolve
 from lmpgap.scenario.columns import Table
 from lmpgap.scenario.faults import FaultLog, as_rows, clip_text, listing
@@ -17,7 +16,7 @@ from lmpgap.scenario.files import RawTable
 from lmpgap.scenario.network import IntArray
 from lmpgap.scenario.parse import to_typed
 from lmpgap.scenario.settings import ScenarioSettings
-from lmpgap.scenario.typed import ColumnTable
+from lmpgap.scenario.typed import ColumnTable, RawColumn, TextColumn
 from lmpgap.scenario.wide import widen_to_long
 
 _SERIES = {
@@ -90,13 +89,13 @@ def _in_own_names(spec: Table, raw: RawTable, own: dict[str, str], log: FaultLog
 
 def _join_date_and_hour(raw: RawTable, columns: dict[str, str], own: dict[str, str]) -> RawTable:
     """Return the table with ``interval_start`` made of a date and an hour column."""
-    dates = as_text(raw.columns[raw.names.index(columns["date"])]).to_pylist()
+    dates = as_text(raw.columns[raw.names.index(columns["date"])]).tolist()
     parts = [dates]
     used = {columns["date"]}
     if columns["hour"] in raw.names:
-        parts.append(as_text(raw.columns[raw.names.index(columns["hour"])]).to_pylist())
+        parts.append(as_text(raw.columns[raw.names.index(columns["hour"])]).tolist())
         used.add(columns["hour"])
-    joined = pa.array([" ".join(texts).strip() for texts in zip(*parts, strict=True)], type=pa.string())
+    joined = TextColumn.of([" ".join(texts).strip() for texts in zip(*parts, strict=True)])
     keep = [i for i, name in enumerate(raw.names) if name not in used]
     return replace(
         raw,
@@ -113,7 +112,7 @@ def _resolve_times(
     if name not in raw.names:
         return raw  # Reading the columns reports it.
     index = raw.names.index(name)
-    labels = distinct_text(raw.columns[index])
+    labels = as_text(raw.columns[index])
     rule = ClockRule(
         zone=settings.time_zone if settings.posted.local else "UTC",
         hour_ending=settings.posted.clock == "hour_ending",
@@ -146,8 +145,10 @@ def _resolve_times(
         return None
     _report_clock(raw, resolved, labels.at, name, log)
     keep = np.flatnonzero(~resolved.missing_hour).astype(np.int64)
-    columns = [column.take(pa.array(keep)) for column in raw.columns]
-    columns[index] = pa.array(resolved.times[keep], type=pa.timestamp("us", tz="UTC"))
+    columns: list[RawColumn] = [
+        column.take(keep) if isinstance(column, TextColumn) else column[keep] for column in raw.columns
+    ]
+    columns[index] = resolved.times[keep]
     lines = raw.lines
     return replace(raw, columns=tuple(columns), lines=lambda rows: lines(keep[rows]))
 
@@ -164,7 +165,7 @@ def _series(spec: Table, raw: RawTable, own: dict[str, str]) -> IntArray:
     for name in _SERIES[spec.name]:
         theirs = own.get(name, name)
         if theirs in raw.names:
-            column = distinct_text(raw.columns[raw.names.index(theirs)])
+            column = as_text(raw.columns[raw.names.index(theirs)])
             series = series * max(len(column.values), 1) + column.codes
             _, series = np.unique(series, return_inverse=True)
             series = np.asarray(series, dtype=np.int64).reshape(-1)

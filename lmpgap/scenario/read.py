@@ -11,7 +11,7 @@ import numpy as np
 
 from lmpgap.errors import ScenarioError
 from lmpgap.scenario.axis import check_axis
-from lmpgap.scenario.build import build_network, name_positions
+from lmpgap.scenario.build import build_contingencies, name_positions
 from lmpgap.scenario.coverage import check_coverage
 from lmpgap.scenario.faults import FaultLog
 from lmpgap.scenario.files import decode, read_bytes, read_raw, table_files
@@ -159,11 +159,10 @@ def assemble(
     )
     starts = interval_axis(tables["loads"])
     positions = name_positions(tables)
-    network = build_network(tables, settings.base_mva, positions)
     source = build_intervals(tables, starts, settings.base_mva, positions)
     check_coverage(tables, source, settings, log)
-    check_topology(tables, network, source, log)
-    check_plausibility(tables, network, source, settings, log)
+    check_topology(tables, positions, build_contingencies(tables, positions["branch"]), source, log)
+    check_plausibility(tables, source, settings, log)
     if log.faults:
         raise ScenarioError(_summary(folder, log), log.faults)
     return Scenario(
@@ -171,7 +170,6 @@ def assemble(
         settings=settings,
         # The line numbers hang on the files' text, which is not worth keeping.
         columns={name: replace(tables[name], lines=row_numbers) for name in TABLES},
-        network=network,
         source=source,
         hashes=dict(hashes),
         warnings=tuple(log.warnings),

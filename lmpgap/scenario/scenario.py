@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from lmpgap.errors import Fault
+from lmpgap.scenario.build import build_network, name_positions
 from lmpgap.scenario.intervals import IntervalSource
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 from lmpgap.scenario.settings import ScenarioSettings
@@ -55,8 +56,6 @@ class Scenario:
         `scenario.toml`.
     columns
         Every table of the contract as typed numpy columns, empty ones included.
-    network
-        The network, per unit.
     source
         What the intervals are assembled from; use `inputs`.
     hashes
@@ -68,7 +67,6 @@ class Scenario:
     folder: Path
     settings: ScenarioSettings
     columns: Mapping[str, ColumnTable]
-    network: Network
     source: IntervalSource
     hashes: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Fault, ...] = ()
@@ -77,6 +75,11 @@ class Scenario:
     def tables(self) -> Mapping[str, pd.DataFrame]:
         """Every table of the contract as a data frame: defaults filled in, times in UTC."""
         return LazyFrames(self.columns)
+
+    @cached_property
+    def network(self) -> Network:
+        """The network, per unit."""
+        return build_network(self.columns, self.settings.base_mva, name_positions(self.columns))
 
     @property
     def starts(self) -> TimeArray:

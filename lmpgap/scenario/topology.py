@@ -1,18 +1,97 @@
-"""Islands, dead buses, and outages that would split the network."""
+"""Islands, dead buses, and outages that would split the network.
+
+Plain lists and numpy, so that checking a scenario imports nothing else.
+"""
 
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
 from lmpgap.scenario.faults import FaultLog, clip_text, listing
 from lmpgap.scenario.intervals import IntervalSource, start_label
-from lmpgap.scenario.network import BoolArray, Contingencies, IntArray, Network
+from lmpgap.scenario.network import BoolArray, Contingencies, IntArray
 from lmpgap.scenario.typed import ColumnTable
 
 
-def dead_buses(network: Network, branch_in_service: BoolArray, has_source: BoolArray) -> BoolArray:
+class Ends(Protocol):
+    """What tells where branches lead; a `Network` has it."""
+
+    @property
+    def n_bus(self) -> int:
+        """Number of buses."""
+
+    @property
+    def from_bus(self) -> IntArray:
+        """Positions of the from ends, (n_branch,)."""
+
+    @property
+    def to_bus(self) -> IntArray:
+        """Positions of the to ends, (n_branch,)."""
+
+
+@dataclass(frozen=True)
+class BranchEnds:
+    """Where branches lead, without the rest of the network."""
+
+    n_bus: int
+    from_bus: IntArray
+    to_bus: IntArray
+
+
+@dataclass(frozen=True)
+class _Forest:
+    """A spanning forest: buses in an order in which parents come first.
+
+    Attributes
+    ----------
+    order
+        All buses, island by island.
+    parent, parent_branch
+        Bus above each bus and the branch to it, -1 for the first bus of an island.
+    island : (n_bus,)
+        Number of the island, counted from zero.
+    """
+
+    order: list[int]
+    parent: list[int]
+    parent_branch: list[int]
+    island: IntArray
+
+
+def _spanning_forest(ends: Ends, branch_in_service: BoolArray) -> _Forest:
+    on = np.flatnonzero(branch_in_service)
+    neighbours: list[list[tuple[int, int]]] = [[] for _ in range(ends.n_bus)]
+    for branch, a, b in zip(on.tolist(), ends.from_bus[on].tolist(), ends.to_bus[on].tolist(), strict=True):
+        neighbours[a].append((b, branch))
+        neighbours[b].append((a, branch))
+    parent, parent_branch, island = [-1] * ends.n_bus, [-1] * ends.n_bus, [-1] * ends.n_bus
+    order: list[int] = []
+    n_island = 0
+    for root in range(ends.n_bus):
+        if island[root] >= 0:
+            continue
+        island[root] = n_island
+        tree = [root]
+        for bus in tree:  # grows while it is walked through
+            for other, branch in neighbours[bus]:
+                if island[other] < 0:
+                    island[other], parent[other], parent_branch[other] = n_island, bus, branch
+                    tree.append(other)
+        order += tree
+        n_island += 1
+    return _Forest(order, parent, parent_branch, np.asarray(island, dtype=np.int64))
+
+
+def islands(ends: Ends, branch_in_service: BoolArray) -> IntArray:
+    """Return the island of each bus, shape (n_bus,), counted from zero in the order of their first buses."""
+    return _spanning_forest(ends, branch_in_service).island
+
+
+def dead_buses(ends: Ends, branch_in_service: BoolArray, has_source: BoolArray) -> BoolArray:
     """Return the buses of islands in which nothing can generate, shape (n_bus,).
 
     Parameters
@@ -20,89 +99,57 @@ def dead_buses(network: Network, branch_in_service: BoolArray, has_source: BoolA
     has_source : (n_bus,)
         True where a resource in service is connected.
     """
-    island = network.islands(branch_in_service)
+    island = islands(ends, branch_in_service)
     alive = np.zeros(int(island.max(initial=-1)) + 1, dtype=bool)
     alive[island[has_source]] = True
     return ~alive[island]
 
 
-def cut_labels(network: Network, branch_in_service: BoolArray) -> IntArray:
-    """Return a 64-bit label per branch: a set of branches whose labels can be XOR-ed to zero is a cut.
+def cut_labels(ends: Ends, branch_in_service: BoolArray) -> list[int]:
+    """Return a 62-bit label per branch: a set of branches some of whose labels XOR to zero splits the network.
 
     Every branch outside a spanning forest gets a random label; a branch of the forest gets the XOR of the
-    labels of all other branches across the cut it defines. A set of branches separates two parts of the
-    network exactly if some of its labels XOR to zero (up to a chance of 2^-60 for sets of a few branches).
-    Branches out of service have label -1 and are never part of a cut.
+    labels of all other branches across the cut that it defines. A set of branches contains a cut exactly if
+    some of its labels XOR to zero, up to a chance of 2^-62 for each subset; the random numbers are seeded, so
+    that the answer is always the same. Branches out of service have the label -1.
 
     Notes
     -----
     Cycle-space sampling: D. Pritchard and R. Thurimella, "Fast computation of small cuts via cycle space
     sampling", ACM Transactions on Algorithms 7(4), 2011, section 2.
     """
-    on = np.flatnonzero(branch_in_service)
-    ends = np.stack([network.from_bus[on], network.to_bus[on]])
-    order, parent, parent_branch = _spanning_forest(network.n_bus, ends)
-    in_forest = np.zeros(on.size, dtype=bool)
-    in_forest[parent_branch[parent_branch >= 0]] = True
-    random = np.random.default_rng(20110101).integers(1, 2**62, size=on.size, dtype=np.int64)
-    label = np.where(in_forest, 0, random)
-    carried = np.zeros(network.n_bus, dtype=np.int64)
-    np.bitwise_xor.at(carried, ends[0], label)
-    np.bitwise_xor.at(carried, ends[1], label)
-    # From the leaves up: what a subtree carries is what leaves it besides the branch above it.
-    above = carried.tolist()
-    for bus in reversed(order):
-        if parent[bus] >= 0:
-            above[parent[bus]] ^= above[bus]
-            label[parent_branch[bus]] = above[bus]
-    labels = np.full(network.n_branch, -1, dtype=np.int64)
-    labels[on] = label
-    return labels
+    forest = _spanning_forest(ends, branch_in_service)
+    labels = np.random.default_rng(20110101).integers(1, 2**62, size=branch_in_service.size, dtype=np.int64)
+    in_forest = np.asarray(forest.parent_branch, dtype=np.int64)
+    labels[in_forest[in_forest >= 0]] = 0
+    labels[~branch_in_service] = 0
+    carried = np.zeros(ends.n_bus, dtype=np.int64)
+    np.bitwise_xor.at(carried, ends.from_bus, labels)
+    np.bitwise_xor.at(carried, ends.to_bus, labels)
+    # From the leaves up: what a subtree carries is what leaves it beside the branch above it.
+    above: list[int] = carried.tolist()
+    result: list[int] = labels.tolist()
+    for bus in reversed(forest.order):
+        if forest.parent[bus] >= 0:
+            above[forest.parent[bus]] ^= above[bus]
+            result[forest.parent_branch[bus]] = above[bus]
+    for branch in np.flatnonzero(~branch_in_service).tolist():
+        result[branch] = -1
+    return result
 
 
-def _spanning_forest(n_bus: int, ends: IntArray) -> tuple[list[int], list[int], IntArray]:
-    """Return buses in an order in which parents come first, each one's parent, and the branch to it."""
-    neighbours: list[list[tuple[int, int]]] = [[] for _ in range(n_bus)]
-    for branch, (a, b) in enumerate(zip(ends[0].tolist(), ends[1].tolist(), strict=True)):
-        neighbours[a].append((b, branch))
-        neighbours[b].append((a, branch))
-    parent = [-1] * n_bus
-    parent_branch = np.full(n_bus, -1, dtype=np.int64)
-    seen = [False] * n_bus
-    order: list[int] = []
-    for root in range(n_bus):
-        if seen[root]:
-            continue
-        seen[root] = True
-        tree = [root]
-        for bus in tree:
-            for other, branch in neighbours[bus]:
-                if not seen[other]:
-                    seen[other] = True
-                    parent[other] = bus
-                    parent_branch[other] = branch
-                    tree.append(other)
-        order += tree
-    return order, parent, parent_branch
-
-
-def islanding_contingencies(
-    network: Network, branch_in_service: BoolArray, contingencies: Contingencies | None = None
-) -> BoolArray:
+def islanding_contingencies(ends: Ends, branch_in_service: BoolArray, contingencies: Contingencies) -> BoolArray:
     """Return which contingencies would split the network, shape (n_contingency,).
 
     Parameters
     ----------
     branch_in_service : (n_branch,)
-        The topology before the contingency; branches already out are no part of it.
-    contingencies
-        Those of the network unless given.
+        The topology before the contingency; branches that are out already are no part of it.
     """
-    contingencies = network.contingencies if contingencies is None else contingencies
-    if contingencies is None:
-        return np.zeros(0, dtype=bool)
-    labels = cut_labels(network, branch_in_service)
-    return np.asarray([_dependent(labels[branches].tolist()) for branches in contingencies.branches], dtype=bool)
+    labels = cut_labels(ends, branch_in_service)
+    return np.asarray(
+        [_dependent([labels[branch] for branch in out.tolist()]) for out in contingencies.branches], dtype=bool
+    )
 
 
 def _dependent(labels: list[int]) -> bool:
@@ -122,28 +169,41 @@ def _dependent(labels: list[int]) -> bool:
     return False
 
 
-def check_topology(tables: Mapping[str, ColumnTable], network: Network, source: IntervalSource, log: FaultLog) -> None:
+def check_topology(
+    tables: Mapping[str, ColumnTable],
+    positions: Mapping[str, Mapping[str, int]],
+    contingencies: Contingencies | None,
+    source: IntervalSource,
+    log: FaultLog,
+) -> None:
     """Report contingencies that split the network (faults), and islands and dead buses (warnings)."""
-    normal = source.branch_in_service
-    if network.contingencies is not None:
-        _check_contingencies(tables, network, source, network.contingencies, log)
-    has_source = np.zeros(network.n_bus, dtype=bool)
-    has_source[network.resource_bus[source.resource_in_service]] = True
-    dead = np.flatnonzero(dead_buses(network, normal, has_source))
+    buses, branches = tables["buses"], tables["branches"]
+    ends = BranchEnds(
+        buses.n_row,
+        branches.text("from_bus").positions(positions["bus"]),
+        branches.text("to_bus").positions(positions["bus"]),
+    )
+    if contingencies is not None:
+        _check_contingencies(tables, ends, source, contingencies, log)
+    island = islands(ends, source.branch_in_service)
+    has_source = np.zeros(buses.n_row, dtype=bool)
+    resource_bus = tables["resources"].text("bus").positions(positions["bus"])
+    has_source[resource_bus[source.resource_in_service]] = True
+    alive = np.unique(island[has_source])
+    dead = np.flatnonzero(~np.isin(island, alive))
     if dead.size:
+        names = buses.text("bus")
         log.warn(
-            tables["buses"].file,
-            f"{dead.size:,} {'buses' if dead.size > 1 else 'bus'} in islands without a resource have no price: "
-            f"{listing([network.buses[i] for i in dead[:5]], total=dead.size)}",
-            row=int(tables["buses"].lines(dead[:1])[0]),
+            buses.file,
+            f"{dead.size:,} {'buses' if dead.size > 1 else 'bus'} in islands without a resource will have no price: "
+            f"{listing([names.at(int(i)) for i in dead[:5]], total=dead.size)}",
+            row=int(buses.lines(dead[:1])[0]),
             column="bus",
             kind="dead bus",
         )
-    island = network.islands(normal)
-    alive = np.unique(island[has_source])
     if alive.size > 1:
         log.warn(
-            tables["branches"].file,
+            branches.file,
             f"the network falls into {alive.size:,} islands with resources; each has an energy price of its own",
             kind="islands",
         )
@@ -151,24 +211,28 @@ def check_topology(tables: Mapping[str, ColumnTable], network: Network, source: 
 
 def _check_contingencies(
     tables: Mapping[str, ColumnTable],
-    network: Network,
+    ends: Ends,
     source: IntervalSource,
     contingencies: Contingencies,
     log: FaultLog,
 ) -> None:
-    table = tables["contingencies"]
+    table, branch = tables["contingencies"], tables["branches"].text("branch")
     first = {name: row for row, name in reversed(list(enumerate(table.text("contingency").tolist())))}
-    refused = islanding_contingencies(network, source.branch_in_service)
+    normal = source.branch_in_service
+    refused = islanding_contingencies(ends, normal, contingencies)
 
     def line(name: str) -> int:
         return int(table.lines(np.array([first[name]]))[0])
+
+    def branches(positions: IntArray) -> str:
+        return listing([branch.at(int(position)) for position in positions])
 
     for i in np.flatnonzero(refused).tolist():
         name = contingencies.names[i]
         log.fault(
             table.file,
-            f"would split the network by taking out {listing([network.branches[b] for b in contingencies.branches[i]])}"
-            ": there are no outage factors for that",
+            f"would split the network by taking out {branches(contingencies.branches[i])}: there are no outage "
+            "factors for that",
             row=line(name),
             column="contingency",
             value=clip_text(name),
@@ -177,17 +241,18 @@ def _check_contingencies(
         )
     # During a planned outage more contingencies can split the network: those are left out while it lasts.
     spans = source.branch_outages
-    for position in np.unique(np.clip(np.concatenate([spans.first, spans.end]), 0, source.n_interval - 1)):
-        on = spans.apply(source.branch_in_service, int(position))
-        if np.array_equal(on, source.branch_in_service):
+    changes = np.unique(np.concatenate([spans.first, spans.end]))
+    for position in changes[changes < source.n_interval].tolist():
+        on = spans.apply(normal, position)
+        if np.array_equal(on, normal):
             continue
-        for i in np.flatnonzero(islanding_contingencies(network, on) & ~refused).tolist():
+        for i in np.flatnonzero(islanding_contingencies(ends, on, contingencies) & ~refused).tolist():
             name = contingencies.names[i]
             refused[i] = True
-            out = [network.branches[b] for b in np.flatnonzero(source.branch_in_service & ~on)]
+            out = np.flatnonzero(normal & ~on)
             log.warn(
                 table.file,
-                f"would split the network while {listing(out)} {'are' if len(out) > 1 else 'is'} out; it is not "
+                f"would split the network while {branches(out)} {'are' if out.size > 1 else 'is'} out; it is not "
                 f"checked in such intervals, the first of which starts {start_label(source.starts[position])}",
                 row=line(name),
                 column="contingency",

@@ -6,7 +6,8 @@ asks for one (`lmpgap.scenario.scenario.Scenario.tables`).
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections import defaultdict
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -74,12 +75,24 @@ class TextColumn:
         return TextColumn(np.zeros(n_row, np.int64), (text,))
 
     @staticmethod
-    def of(texts: list[str]) -> TextColumn:
+    def of(texts: Sequence[str]) -> TextColumn:
         """Return a column of the given texts."""
-        values = tuple(dict.fromkeys(texts))
-        position = {value: i for i, value in enumerate(values)}
-        return TextColumn(np.asarray([position[text] for text in texts], dtype=np.int64), values)
+        index: defaultdict[str, int] = defaultdict()
+        index.default_factory = index.__len__
+        codes = np.fromiter(map(index.__getitem__, texts), np.int64, len(texts))
+        return TextColumn(codes, tuple(index))
 
+    def trimmed(self) -> TextColumn:
+        """Return the column without blanks around its texts."""
+        stripped = [value.strip() for value in self.values]
+        if tuple(stripped) == self.values:
+            return self
+        distinct = TextColumn.of(stripped)
+        return TextColumn(distinct.codes[self.codes], distinct.values)
+
+
+RawColumn = TextColumn | NDArray[np.float64] | NDArray[np.int64] | TimeArray
+"""A column as a file holds it: text (all of a CSV file), or what a Parquet file has typed already."""
 
 AnyColumn = TextColumn | NDArray[np.float64] | NDArray[np.int64] | NDArray[np.bool_] | TimeArray
 

@@ -6,12 +6,12 @@ import re
 from dataclasses import dataclass
 
 import numpy as np
-import pyarrow as pa
 
 from lmpgap.scenario.cells import as_text
 from lmpgap.scenario.faults import FaultLog, clip_text, suggestion
 from lmpgap.scenario.files import RawTable
 from lmpgap.scenario.network import IntArray
+from lmpgap.scenario.typed import TextColumn
 
 COMPONENTS = ("lmp", "energy_component", "congestion_component", "loss_component")
 _LEADING = ("interval_start", "date", "hour", "node", "component", "version", "published_at")
@@ -81,14 +81,14 @@ def widen_to_long(raw: RawTable, own: dict[str, str], log: FaultLog) -> RawTable
 
 
 def _melt(raw: RawTable, names: list[str], across: list[int], log: FaultLog) -> _Melted | None:
-    cells = np.stack([np.asarray(as_text(raw.columns[i]).to_numpy(zero_copy_only=False), object) for i in across])
+    cells = np.stack([np.asarray(as_text(raw.columns[i]).tolist(), object) for i in across])
     # Row by row, so that the order of hours within a file stays the order of the cells.
     row, column = np.nonzero((cells != "").T)
     return _Melted(row.astype(np.int64), [names[i] for i in across], column.astype(np.int64), cells[column, row])
 
 
 def _text(raw: RawTable, index: int) -> list[str]:
-    return [str(value) for value in as_text(raw.columns[index]).to_pylist()]
+    return as_text(raw.columns[index]).tolist()
 
 
 def _to_components(
@@ -155,7 +155,7 @@ def _to_components(
     return RawTable(
         raw.file,
         tuple(columns),
-        tuple(pa.array(texts, type=pa.string()) for texts in columns.values()),
+        tuple(TextColumn.of(texts) for texts in columns.values()),
         lambda chosen: lines(rows[chosen]),
         raw.comma_decimals,
     )
