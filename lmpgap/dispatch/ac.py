@@ -51,6 +51,12 @@ STATUS = {
 }
 """Ipopt's words for how it ended; every other word is `SolveStatus.FAILED`."""
 
+_INFEASIBLE_TWICE = 2
+"""Infeasible from this many starts counts as infeasible: the answer of one start says little, a third adds little."""
+
+_MOST_ITERATIONS = 600
+"""Per attempt: networks of 10,000 buses take fewer than 100, and a solve that wanders should not hold up a week."""
+
 _PROGRAMS_KEPT = 4
 """Programs kept per topology: the plain one, and the latest sets of added flow limits."""
 
@@ -169,9 +175,9 @@ class AcDispatch:
         if impossible:
             return self._without_solution(inputs, SolveStatus.INFEASIBLE, impossible, 0.0, began, ())
         given = start if start is not None and start.status.has_solution else None
-        best: tuple[SolveStatus, AcSolution] | None = None
+        best: tuple[SolveStatus, str, AcSolution] | None = None
         notes: list[str] = []
-        seconds = 0.0
+        seconds, infeasible = 0.0, 0
         status, words = SolveStatus.FAILED, ""
         for attempt in LADDER:
             if attempt.from_start and given is None:
@@ -181,18 +187,22 @@ class AcDispatch:
                 if attempt.from_start and given is not None
                 else flat_start(program, vectors)
             )
-            before = time.perf_counter()
-            status, words, solution = _run(program, vectors, x, attempt)
-            seconds += time.perf_counter() - before
+            status, words, solution, spent = _run(program, vectors, x, attempt)
+            seconds += spent
             if solution is not None:
-                best = status, solution
+                best = status, words, solution
             if status is SolveStatus.LOCALLY_OPTIMAL:
+                if notes:
+                    notes.append(f"solved from {attempt.name}")
                 break
             notes.append(f"from {attempt.name}: {words}")
+            infeasible += status is SolveStatus.INFEASIBLE
+            if infeasible == _INFEASIBLE_TWICE:
+                break
         if best is None:
             return self._without_solution(inputs, status, words, seconds, began, tuple(notes))
-        status, solution = best
-        return self._result(program, vectors, inputs, flow_limits, status, solution, seconds, began, notes)
+        status, words, solution = best
+        return self._result(program, vectors, inputs, flow_limits, status, words, solution, seconds, began, notes)
 
     def _impossible(self, program: AcProgram, inputs: IntervalInputs, vectors: AcVectors) -> str:
         """Return what rules out any dispatch before a solver sees it, in words; empty if nothing does."""
@@ -250,6 +260,7 @@ class AcDispatch:
         inputs: IntervalInputs,
         flow_limits: FlowLimits,
         status: SolveStatus,
+        words: str,
         solution: AcSolution,
         seconds: float,
         began: float,
@@ -274,7 +285,7 @@ class AcDispatch:
         return DispatchResult(
             formulation=self.name,
             status=status,
-            message=f"local optimum, {status.value}",
+            message=words,
             solver=SOLVER,
             solver_seconds=seconds,
             total_seconds=time.perf_counter() - began,
@@ -298,9 +309,10 @@ class AcDispatch:
 
 def _run(
     program: AcProgram, vectors: AcVectors, x: FloatArray, attempt: Attempt
-) -> tuple[SolveStatus, str, AcSolution | None]:
-    """Return the status, the solver's words, and the solution where there is one."""
-    solver = program.solver(attempt.settings)
+) -> tuple[SolveStatus, str, AcSolution | None, float]:
+    """Return the status, the solver's words, the solution where there is one, and the solver's seconds."""
+    solver = program.solver({"max_iter": _MOST_ITERATIONS, **attempt.settings})
+    began = time.perf_counter()
     try:
         answer = solver(
             x0=x,
@@ -312,7 +324,8 @@ def _run(
         )
     except RuntimeError as failure:
         # casadi turns whatever its plugin throws into this; one interval must not end a run.
-        return SolveStatus.FAILED, str(failure).strip().splitlines()[-1], None
+        return SolveStatus.FAILED, str(failure).strip().splitlines()[-1], None, time.perf_counter() - began
+    seconds = time.perf_counter() - began
     words = str(solver.stats()["return_status"])
     status = STATUS.get(words, SolveStatus.FAILED)
     vector = {name: np.asarray(answer[name], dtype=float).ravel() for name in ("x", "lam_x", "lam_g")}
@@ -323,4 +336,4 @@ def _run(
         bound_multiplier=vector["lam_x"] / program.objective_scale,
         row_multiplier=vector["lam_g"] / program.objective_scale,
     )
-    return status, words.replace("_", " ").lower(), solution if status.has_solution else None
+    return status, words.replace("_", " ").lower(), solution if status.has_solution else None, seconds
