@@ -13,6 +13,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from lmpgap.prices.hubs import hub_weights, weighted, zone_weights
 from lmpgap.scenario.network import FloatArray, IntArray
 from lmpgap.settlement.price_set import PriceSet
 
@@ -33,14 +34,14 @@ class NodeBasket:
     n_bus : int
     hub_weights : (n_hub, n_bus)
         Rows sum to one.
-    zone_members : (n_zone, n_bus)
-        1 where the bus belongs to the zone.
+    zone_of_bus : (n_bus,)
+        Name of the zone that is a settlement node, else empty.
     """
 
     names: tuple[str, ...]
     n_bus: int
     hub_weights: FloatArray
-    zone_members: FloatArray
+    zone_of_bus: tuple[str, ...]
 
     @staticmethod
     def of(buses: pd.DataFrame, hubs: pd.DataFrame, bus_names: Sequence[str]) -> NodeBasket:
@@ -49,22 +50,20 @@ class NodeBasket:
         taken = set(bus_names)
         hub_names = [name for name in dict.fromkeys(hubs["hub"].astype(str)) if name not in taken]
         taken |= set(hub_names)
-        hub_weights = np.zeros((len(hub_names), len(bus_index)))
+        weights = np.zeros((len(hub_names), len(bus_index)))
         own = hubs[hubs["hub"].isin(hub_names)]
         rows = pd.Index(hub_names, dtype="object").get_indexer(pd.Index(own["hub"], dtype="object"))
         columns = bus_index.get_indexer(pd.Index(own["bus"], dtype="object"))
-        np.add.at(hub_weights, (rows, columns), own["weight"].to_numpy(float))
-        hub_weights /= hub_weights.sum(axis=1, keepdims=True)
+        np.add.at(weights, (rows, columns), own["weight"].to_numpy(float))
 
-        zone_of_bus = buses.set_index("bus")["zone"].reindex(bus_index) if "zone" in buses else pd.Series(dtype=str)
-        zone_of_bus = zone_of_bus.fillna("").astype(str)
-        zone_names = [name for name in dict.fromkeys(zone_of_bus) if name and name not in taken]
-        zone_members = np.array([(zone_of_bus == name).to_numpy(float) for name in zone_names])
+        listed = buses.set_index("bus")["zone"].reindex(bus_index) if "zone" in buses else pd.Series("", bus_index)
+        zone_of_bus = tuple("" if zone in taken else zone for zone in listed.fillna("").astype(str))
+        zone_names = tuple(dict.fromkeys(zone for zone in zone_of_bus if zone))
         return NodeBasket(
             names=(*bus_names, *hub_names, *zone_names),
             n_bus=len(bus_index),
-            hub_weights=hub_weights,
-            zone_members=zone_members.reshape(len(zone_names), len(bus_index)),
+            hub_weights=hub_weights(weights, hub_names),
+            zone_of_bus=zone_of_bus,
         )
 
     def of_buses(self, values: FloatArray, load: FloatArray) -> FloatArray:
@@ -80,11 +79,12 @@ class NodeBasket:
         (n_interval, n_node)
             ``nan`` where a bus with weight has no value, or a zone has no load.
         """
-        return np.hstack([values, _mix(values, self.hub_weights[None, :, :]), _mix(values, self._zone_weights(load))])
+        return np.hstack([values, weighted(values, self.hub_weights), weighted(values, self._zone_weights(load))])
 
     def islands(self, bus_island: IntArray) -> IntArray:
         """Return the island of each node, shape (n_node,), or `STRADDLES_ISLANDS`."""
-        members = np.vstack([self.hub_weights != 0.0, self.zone_members != 0.0])
+        zone_members = zone_weights(self.zone_of_bus, np.ones(self.n_bus))[1] > 0.0
+        members = np.vstack([self.hub_weights != 0.0, zone_members])
         labels = np.where(members, bus_island[None, :], -1)
         first = labels.max(axis=1, initial=STRADDLES_ISLANDS)
         one = ~np.any(members & (bus_island[None, :] != first[:, None]), axis=1)
@@ -94,7 +94,7 @@ class NodeBasket:
         """Return computed prices at all nodes."""
         parts = {part: self.of_buses(getattr(at_buses, part), load) for part in _PARTS}
         # A negative weight turns a range around.
-        weights = (self.hub_weights[None, :, :], self._zone_weights(load))
+        weights = (self.hub_weights, self._zone_weights(load))
         low = np.hstack([at_buses.low, *(_mix_range(at_buses.low, at_buses.high, w)[0] for w in weights)])
         high = np.hstack([at_buses.high, *(_mix_range(at_buses.low, at_buses.high, w)[1] for w in weights)])
         changes: dict[str, Any] = {**parts, "low": low, "high": high}
@@ -111,23 +111,9 @@ class NodeBasket:
 
     def _zone_weights(self, load: FloatArray) -> FloatArray:
         """Return (n_interval, n_zone, n_bus) weights; ``nan`` for a zone without load."""
-        weights = self.zone_members[None, :, :] * load[:, None, :]
-        total = weights.sum(axis=2, keepdims=True)
-        return np.asarray(np.divide(weights, total, out=np.full(weights.shape, np.nan), where=total != 0.0))
-
-
-def _mix(values: FloatArray, weights: FloatArray) -> FloatArray:
-    """Return (n_interval, n_mix) weighted sums; a missing value counts only where it has weight."""
-    missing = np.isnan(values)
-    summed = np.einsum("tb,tmb->tm", np.where(missing, 0.0, values), _per_interval(weights, len(values)))
-    lacks = np.einsum("tb,tmb->tm", missing.astype(float), (_per_interval(weights, len(values)) != 0.0).astype(float))
-    return np.where(lacks > 0, np.nan, summed)
+        return zone_weights(self.zone_of_bus, load)[1]
 
 
 def _mix_range(low: FloatArray, high: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:
     up, down = np.maximum(weights, 0.0), np.minimum(weights, 0.0)
-    return _mix(low, up) + _mix(high, down), _mix(high, up) + _mix(low, down)
-
-
-def _per_interval(weights: FloatArray, n_interval: int) -> FloatArray:
-    return np.broadcast_to(weights, (n_interval, *weights.shape[1:]))
+    return weighted(low, up) + weighted(high, down), weighted(high, up) + weighted(low, down)

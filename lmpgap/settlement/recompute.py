@@ -20,7 +20,8 @@ from lmpgap.settlement.aggregate import by_account
 from lmpgap.settlement.exhibit.manifest import Finding
 from lmpgap.settlement.options import SettlementOptions
 from lmpgap.settlement.positions import COUNTED, combined_interval
-from lmpgap.settlement.settle import RunTables, Settlement, settle
+from lmpgap.settlement.result import Settlement
+from lmpgap.settlement.settle import RunTables, settle
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
 if TYPE_CHECKING:

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from datetime import date
+from pathlib import Path
 from typing import TYPE_CHECKING, Any, Protocol
 
 import pandas as pd
@@ -19,12 +20,12 @@ from lmpgap.settlement.nodes import NodeBasket
 from lmpgap.settlement.options import POSTED, SettlementOptions
 from lmpgap.settlement.positions import (
     OUTSIDE,
-    contract_table,
     gather_positions,
     unsettled_rows,
 )
 from lmpgap.settlement.posted import latest_versions, published_at
 from lmpgap.settlement.posted_reference import ReferenceEvidence
+from lmpgap.settlement.result import Settlement
 from lmpgap.settlement.rights import by_holder
 
 if TYPE_CHECKING:
@@ -33,6 +34,10 @@ if TYPE_CHECKING:
 TASK = "settling intervals"
 _CHUNK_PRICES = 500_000
 """Intervals are settled in chunks of about this many prices, so that memory does not grow with their number."""
+
+
+ARRIVES_LATER = ("posted", "posted_constraints", "positions", "rights", "hubs")
+"""Tables that never cause a solve."""
 
 
 class RunTables(Protocol):
@@ -50,76 +55,6 @@ class RunTables(Protocol):
     def write(self, name: str, frame: pd.DataFrame) -> None:
         """Replace a derived table."""
         ...
-
-
-@dataclass(frozen=True, kw_only=True)
-class Settlement:
-    """Money at stake per account, and everything behind it.
-
-    Attributes
-    ----------
-    claim, against
-        Price set that is claimed to be wrong, and the formulation it is held against.
-    options
-        Choices behind the figures; ``posted_reference`` as it was decided.
-    currency, time_zone
-        Of the scenario.
-    hours
-        Length of an interval [h].
-    rows
-        Per account, interval, node and component: see `lmpgap.settlement.positions.settle_errors`.
-    accounts
-        Per account and component: see `lmpgap.settlement.aggregate.by_account`.
-    baselines
-        The same for the two readings of the loss-component error, ``component``, against each formulation with losses
-        that the run holds, ``against``.
-    left_out
-        Rows that do not count, by account, component and reason.
-    rights, holders
-        What rights are paid on posted and on reference congestion, per interval and per holder.
-    reference
-        Per interval: which common reference the components were compared on, and its coverage.
-    rule, today, deadlines
-        The dispute rule, the day the days left are counted from, and one row per account and operating date with the
-        amount claimed; no rule, no deadlines.
-    notes
-        What a reader should know besides.
-    """
-
-    claim: str
-    against: str
-    options: SettlementOptions
-    currency: str
-    time_zone: str
-    hours: float
-    rows: pd.DataFrame
-    accounts: pd.DataFrame
-    baselines: pd.DataFrame
-    left_out: pd.DataFrame
-    rights: pd.DataFrame
-    holders: pd.DataFrame
-    reference: pd.DataFrame
-    rule: DeadlineRule | None
-    today: date | None
-    deadlines: pd.DataFrame
-    notes: tuple[str, ...]
-
-    @property
-    def claims(self) -> pd.DataFrame:
-        """One row per account in the reading that is claimed (``options.basis``)."""
-        own = self.accounts[self.accounts["component"] == self.options.basis]
-        return own.reset_index(drop=True)
-
-    @property
-    def table(self) -> pd.DataFrame:
-        """The run table ``settlement``."""
-        return contract_table(self.rows)
-
-    @property
-    def formulations(self) -> tuple[str, ...]:
-        """Formulations of the run that the figures rest on, in the order of the ladder."""
-        used = {self.claim, self.against, *self.baselines["against"]}
-        return tuple(name for name in FORMULATIONS if name in used)
 
 
 def settle(
@@ -160,9 +95,11 @@ def settle(
     Raises
     ------
     DataError
-        When there are no positions, no prices of one of the sides, or an account is unknown.
+        When there are no positions, no prices of one of the sides, an account is unknown, or the run was made from
+        other inputs.
     """
     chosen = options or SettlementOptions(materiality=scenario.settings.settlement.materiality)
+    _check_inputs(run, scenario)
     tables = scenario.tables
     positions, rights = _of_accounts(tables["positions"], tables["rights"], accounts)
     posted = latest_versions(tables["posted"])
@@ -242,6 +179,22 @@ def _of_accounts(
             ],
         )
     return positions[positions["account"].isin(accounts)], rights[rights["holder"].isin(accounts)]
+
+
+def _check_inputs(run: RunTables, scenario: Scenario) -> None:
+    """Refuse a run whose prices were computed from other inputs than the scenario has now."""
+    recorded: Mapping[str, str] = run.manifest.get("scenario", {}).get("sha256", {})
+    changed = [
+        name
+        for name in sorted({*recorded, *scenario.hashes})
+        # The settings are kept with the run; what settles may arrive and change later.
+        if Path(name).stem not in ("scenario", *ARRIVES_LATER) and recorded.get(name) != scenario.hashes.get(name)
+    ]
+    if recorded and changed:
+        raise DataError(
+            "the inputs changed after the run was made: run `lmpgap price` again, it solves only what they touch",
+            [Fault(table=name, message="is not the file that was solved") for name in changed],
+        )
 
 
 def _check(claim: str, against: str, held: Sequence[str], posted: pd.DataFrame, positions: pd.DataFrame) -> None:
@@ -369,16 +322,3 @@ def _joined(parts: Sequence[pd.DataFrame]) -> pd.DataFrame:
     if not parts:
         return pd.DataFrame()
     return parts[0] if len(parts) == 1 else pd.concat(parts, ignore_index=True)
-
-
-def with_today(settlement: Settlement, today: date) -> Settlement:
-    """Return the settlement with the days left counted from another day; nothing is computed anew but those."""
-    if settlement.rule is None:
-        return replace(settlement, today=today)
-    rule, table = settlement.rule, settlement.deadlines.copy()
-    left = [
-        pd.NA if pd.isna(start) else rule.days_left(pd.Timestamp(start).date(), today)
-        for start in table["counted_from"]
-    ]
-    table["days_left"] = pd.array(left, dtype="Int64")
-    return replace(settlement, today=today, deadlines=table)

@@ -44,8 +44,8 @@ from lmpgap.settlement.recompute import (
     settle_again,
     unusual_settings,
 )
+from lmpgap.settlement.result import Settlement
 from lmpgap.settlement.rights import RIGHTS_COLUMNS
-from lmpgap.settlement.settle import Settlement
 from lmpgap.tolerances import DEFAULT_TOLERANCES
 
 if TYPE_CHECKING:

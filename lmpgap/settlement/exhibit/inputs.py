@@ -10,13 +10,14 @@ import pandas as pd
 
 from lmpgap.errors import DataError
 from lmpgap.settlement.exhibit.manifest import sha256
+from lmpgap.settlement.settle import ARRIVES_LATER
 
 if TYPE_CHECKING:
     from lmpgap.scenario.scenario import Scenario
 
 INPUTS = "inputs"
 
-SETTLEMENT_FILES = ("scenario", "posted", "posted_constraints", "positions", "rights", "hubs")
+SETTLEMENT_FILES = ("scenario", *ARRIVES_LATER)
 """Stems of the files that hold no network, offers or loads."""
 
 

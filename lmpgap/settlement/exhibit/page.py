@@ -89,8 +89,9 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
                 "amount": money(row["amount"]),
                 "worst": span(row["amount_low"], row["amount_high"]),
             }
+            for total in totals[:2]
             for row in statement["baselines"]
-            if row["account"] in {total["account"] for total in totals[:2]}
+            if row["account"] == total["account"]
         ],
         "certificate": [
             {

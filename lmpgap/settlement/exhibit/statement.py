@@ -17,7 +17,8 @@ import pandas as pd
 
 from lmpgap import __version__
 from lmpgap.settlement.positions import COUNTED
-from lmpgap.settlement.settle import RunTables, Settlement
+from lmpgap.settlement.result import Settlement
+from lmpgap.settlement.settle import RunTables
 
 if TYPE_CHECKING:
     from lmpgap.scenario.scenario import Scenario

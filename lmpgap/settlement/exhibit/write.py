@@ -28,7 +28,8 @@ from lmpgap.settlement.exhibit.page import claim_page, method_page
 from lmpgap.settlement.exhibit.rows import exhibit_rights, exhibit_rows, exhibit_solves, to_csv
 from lmpgap.settlement.exhibit.statement import build_statement, to_json
 from lmpgap.settlement.exhibit.workbook import ROWS_SHEET, workbook
-from lmpgap.settlement.settle import RunTables, Settlement
+from lmpgap.settlement.result import Settlement
+from lmpgap.settlement.settle import RunTables
 
 if TYPE_CHECKING:
     from lmpgap.scenario.scenario import Scenario
