@@ -106,8 +106,8 @@ class Plan:
         self.scenario = scenario
         self.formulations = tuple(name for name in FORMULATIONS if name in formulations)
         self.settings = settings
-        self.positions = list(range(len(scenario.interval_starts)) if positions is None else positions)
-        self._starts = scenario.interval_starts.tz_convert("UTC").tz_localize(None).to_numpy().astype("datetime64[us]")
+        self.positions = list(range(scenario.n_interval) if positions is None else positions)
+        self._starts = scenario.starts.astype("datetime64[us]")
         self._common = fingerprint(SOLVE_VERSION, scenario.network, settings.as_dict())
 
     @property

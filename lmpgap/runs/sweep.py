@@ -74,7 +74,7 @@ def sweep(
 
 def peak_position(scenario: Scenario) -> int:
     """Return the position of the interval with the highest load."""
-    loads = [float(scenario.inputs(k).load_p.sum()) for k in range(len(scenario.interval_starts))]
+    loads = [float(scenario.inputs(k).load_p.sum()) for k in range(scenario.n_interval)]
     return int(np.argmax(loads))
 
 

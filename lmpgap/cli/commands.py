@@ -1,0 +1,20 @@
+"""The commands, in the order in which one uses them."""
+
+from __future__ import annotations
+
+import typer
+
+from lmpgap.cli.check import check
+from lmpgap.cli.price import compare, price
+from lmpgap.cli.settle import settle
+from lmpgap.cli.sweep import sweep
+from lmpgap.cli.verify import verify
+from lmpgap.cli.weekly import weekly
+
+COMMANDS = (check, price, compare, settle, weekly, sweep, verify)
+
+
+def register(app: typer.Typer) -> None:
+    """Add every command to the application; options and help come from the functions' signatures and docstrings."""
+    for command in COMMANDS:
+        app.command(no_args_is_help=True)(command)

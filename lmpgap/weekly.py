@@ -1,0 +1,197 @@
+"""The main job: from a scenario folder to the weekly price-divergence report.
+
+Each step is a function of the run folder and leaves its table there; `weekly_report` chains them. Steps that have
+nothing to work on (no posted prices, no positions) are left out, and the report says so.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from datetime import date
+from itertools import pairwise
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+
+from lmpgap.dispatch.names import FORMULATIONS
+from lmpgap.divergence.check_posted import PostedCheck, check_posted
+from lmpgap.divergence.compare import Comparison, compare_run
+from lmpgap.divergence.labels import IntervalLabels
+from lmpgap.divergence.posted import POSTED
+from lmpgap.divergence.price_set import PriceSet
+from lmpgap.divergence.sentences import Wording
+from lmpgap.divergence.week import weekly_sentences
+from lmpgap.errors import DataError
+from lmpgap.progress import Progress, silent
+from lmpgap.report.index import update_index
+from lmpgap.report.render import write_weekly_report
+from lmpgap.report.view import build_view
+from lmpgap.runs.folder import RunFolder
+from lmpgap.runs.price import price
+from lmpgap.runs.schema import RUN_TABLES
+from lmpgap.scenario.read import read_scenario
+from lmpgap.scenario.scenario import Scenario
+from lmpgap.settlement.settle import Settlement, settle
+
+TASK = "weekly report"
+_STEPS = ("checking posted prices", "comparing", "settling", "writing")
+
+
+@dataclass(frozen=True, kw_only=True)
+class Weekly:
+    """What a weekly run leaves behind.
+
+    Attributes
+    ----------
+    run
+        Run folder with every table.
+    report
+        The HTML file.
+    index
+        Index page over the weeks written so far, next to the report.
+    sentences
+        What happened this week, in five sentences with figures.
+    """
+
+    run: RunFolder
+    report: Path
+    index: Path
+    sentences: tuple[str, ...]
+
+
+def weekly_report(
+    scenario: Scenario | str | Path,
+    run: str | Path,
+    out: str | Path,
+    *,
+    workers: int = 1,
+    cluster: str | None = None,
+    today: date | None = None,
+    progress: Progress = silent,
+    **settings: Any,
+) -> Weekly:
+    """Solve what is missing, compare, check posted prices, settle, and write the report.
+
+    Parameters
+    ----------
+    scenario
+        Scenario or its folder.
+    run
+        Run folder; finished solves in it are used again.
+    out
+        HTML file to write; the index of weeks is kept in its folder.
+    today
+        Day the days left to a dispute deadline are counted from.
+    settings
+        As for `lmpgap.runs.price.price`.
+
+    Raises
+    ------
+    LmpgapError
+        Data or solve errors, in words. An hour without a solution is not an error: the report lists it.
+    """
+    if not isinstance(scenario, Scenario):
+        scenario = read_scenario(scenario)
+    folder = price(scenario, run, workers=workers, cluster=cluster, progress=progress, **settings)
+    with folder.writing():
+        progress(TASK, 0, len(_STEPS))
+        check = check_run(scenario, folder)
+        progress(TASK, 1, len(_STEPS))
+        comparison = compare_all(scenario, folder, extra=() if check.prices is None else (check.prices,))
+        progress(TASK, 2, len(_STEPS))
+        settlement = settle_run(scenario, folder, today)
+        progress(TASK, 3, len(_STEPS))
+    tables = {name: folder.table(name) for name in RUN_TABLES}
+    sentences = tuple(
+        weekly_sentences(
+            prices=tables["prices"],
+            solves=tables["solves"],
+            differences=comparison.differences,
+            drivers=comparison.drivers,
+            findings=check.findings,
+            settlement=settlement,
+            wording=wording(scenario),
+        )
+    )
+    view = build_view(tables, scenario, folder.manifest, sentences)
+    report = write_weekly_report(view, out)
+    index = update_index(report.parent, view, report)
+    progress(TASK, len(_STEPS), len(_STEPS))
+    return Weekly(run=folder, report=report, index=index, sentences=sentences)
+
+
+def check_run(scenario: Scenario, folder: RunFolder) -> PostedCheck:
+    """Check the posted prices against the run and store the findings."""
+    check = check_posted(scenario, {"operating_point": folder.table("operating_point")})
+    folder.write("findings", check.findings)
+    return check
+
+
+def compare_all(scenario: Scenario, folder: RunFolder, extra: Sequence[PriceSet] = ()) -> Comparison:
+    """Compare every step of the ladder, every formulation with AC, and posted prices with all of them."""
+    return compare_run(
+        folder,
+        comparison_pairs(formulations_of(folder), posted=bool(extra)),
+        extra=extra,
+        hubs=scenario.tables["hubs"],
+        reference_weights=reference_weights(scenario) if extra else None,
+    )
+
+
+def comparison_pairs(formulations: Sequence[str], *, posted: bool) -> list[tuple[str, str]]:
+    """Return the pairs worth explaining, each once: steps of the ladder, then everything against the last of it."""
+    ladder = [name for name in FORMULATIONS if name in formulations]
+    pairs = [*pairwise(ladder), *((name, ladder[-1]) for name in ladder[:-1])]
+    if posted:
+        pairs += [(POSTED, name) for name in ladder]
+    return list(dict.fromkeys(pairs))
+
+
+def formulations_of(folder: RunFolder) -> list[str]:
+    """Return the formulations with prices in a run.
+
+    Raises
+    ------
+    DataError
+        When there is no price at all.
+    """
+    found = set(folder.table("prices", columns=["formulation"])["formulation"])
+    if not found:
+        reasons = folder.table("solves")["reasons"].value_counts()
+        why = f": {reasons.index[0]}" if len(reasons) else ""
+        raise DataError(f"no interval of {folder.path} has a solution{why}")
+    return [name for name in FORMULATIONS if name in found]
+
+
+def settle_run(scenario: Scenario, folder: RunFolder, today: date | None = None) -> Settlement | None:
+    """Settle the posted prices against the best formulation with losses; ``None`` where there is nothing to settle."""
+    formulations = formulations_of(folder)
+    against = next((name for name in ("ac", "dc-loss", "soc") if name in formulations), None)
+    nothing = scenario.tables["posted"].empty or scenario.tables["positions"].empty or against is None
+    if nothing or against is None:
+        folder.write("settlement", RUN_TABLES["settlement"].empty())
+        return None
+    return settle(folder, scenario, POSTED, against, today=today)
+
+
+def reference_weights(scenario: Scenario) -> pd.DataFrame:
+    """Return the reference weights, one row per interval start and one column per bus [-]."""
+    return pd.DataFrame(
+        [scenario.reference_weights(position) for position in range(scenario.n_interval)],
+        index=scenario.interval_starts,
+        columns=list(scenario.network.buses),
+    )
+
+
+def wording(scenario: Scenario) -> Wording:
+    """Return how intervals, buses and money are called in sentences about this scenario."""
+    settings = scenario.settings
+    buses = scenario.tables["buses"]
+    names = dict(zip(buses["bus"], buses["name"], strict=True)) if "name" in buses else {}
+    return Wording(
+        labels=IntervalLabels.of(scenario.interval_starts, settings.time_zone, settings.interval_minutes),
+        names={bus: name for bus, name in names.items() if isinstance(name, str) and name},
+        unit=f"{'$' if settings.currency == 'USD' else settings.currency}/MWh",
+    )
