@@ -175,7 +175,8 @@ def _drop_stale(folder: RunFolder, ledger: Mapping[str, Mapping[str, str]], vali
 
 
 def _without(table: pa.Table, stale: set[str]) -> pa.Table:
-    times = pc.strftime(table["interval_start"], format="%Y-%m-%dT%H:%M:%SZ")
+    # Cast first: at a finer unit %S would print the fraction as well.
+    times = pc.strftime(table["interval_start"].cast(pa.timestamp("s", tz="UTC")), format="%Y-%m-%dT%H:%M:%SZ")
     names = pc.binary_join_element_wise(times, table["formulation"], "|")
     return table.filter(pc.invert(pc.is_in(names, value_set=pa.array(sorted(stale), type=pa.string()))))
 
