@@ -135,7 +135,10 @@ def _priced(
             low, high = np.fmin(found.low, split.lmp), np.fmax(found.high, split.lmp)
         money = tuple(money_balance(network, inputs, result, split, hours=hours).rows())
     check = ac_check(network, inputs, result, limits) if result.relaxed and result.status.has_solution else None
-    certificate = certify(network, inputs, result, split, ac=ac, check=check, tolerances=tolerances)
+    # Only a relaxation is judged by the AC cost: other solves do not depend on whether `ac` is in the run.
+    certificate = certify(
+        network, inputs, result, split, ac=ac if result.relaxed else None, check=check, tolerances=tolerances
+    )
     return SolvedInterval(
         start=planned.start,
         formulation=name,

@@ -200,7 +200,7 @@ RUN_TABLES: dict[str, RunTable] = {
                     ("price_residual", "number", "$/MWh", "solver's multiplier against the rebuilt price"),
                     ("cone_slack", "number", "pu", "largest slack of a relaxed cone"),
                     ("loop_angle_deg", "number", "deg", "largest angle sum around a loop"),
-                    ("cost_gap", "number", "-", "relative to the AC local optimum"),
+                    ("cost_gap", "number", "-", "of a relaxation, relative to the AC local optimum"),
                     ("ac_mismatch_mw", "number", "MW", "power missing in an AC power flow at this dispatch"),
                     ("verdict", "text", "", "may this price be used"),
                     ("reasons", "text", "", "why, in words"),
