@@ -249,8 +249,12 @@ def _check_offers(table: ColumnTable, log: FaultLog) -> None:
         np.sort(after[gap]),
         table.lines,
         lambda row: (
-            f"leaves a {'gap' if start[row] > end[previous[row]] else 'overlap'}: the segment before it ends at "
-            f"{end[previous[row]]:g} MW (line {table.lines(np.array([previous[row]]))[0]})"
+            (
+                f"leaves a gap: the segment before it ends at {end[previous[row]]:g} MW"
+                if start[row] > end[previous[row]]
+                else f"overlaps the segment before it, which ends at {end[previous[row]]:g} MW"
+            )
+            + f" (line {table.lines(np.array([previous[row]]))[0]})"
         ),
         column="from_mw",
         value=lambda row: f"{start[row]:g}",
