@@ -34,40 +34,63 @@ def recover_angles(
         Largest angle by which a branch misses the fitted angles of its ends [deg]: what the loops leave open, as the
         fit spreads it over their branches. Zero if and only if the angles around every loop add up.
     """
-    magnitude = np.hypot(c, s)
-    used = np.flatnonzero(branch_in_service & (magnitude > 0.0))
-    if used.size == 0:
-        return np.zeros(network.n_bus), 0.0
-    start, end = network.from_bus[used], network.to_bus[used]
-    difference = np.arctan2(s[used], c[used])
-    impedance = np.hypot(network.r[used], network.x[used])
-    n_bus, rows = network.n_bus, np.arange(used.size)
-    difference_of = sparse.csr_array(
-        (
-            np.concatenate([np.ones(used.size), -np.ones(used.size)]),
-            (np.concatenate([rows, rows]), np.concatenate([start, end])),
-        ),
-        shape=(used.size, n_bus),
-    )
-    tree = _tree(start, end, impedance, n_bus)
-    reference = _references(start, end, n_bus)
-    ground = sparse.csr_array(
-        (np.ones(reference.size), (np.arange(reference.size), reference)), shape=(reference.size, n_bus)
-    )
-    along_tree = splu(sparse.csc_matrix(sparse.vstack([difference_of[tree], ground]))).solve(
-        np.concatenate([difference[tree], np.zeros(reference.size)])
-    )
-    expected = difference_of @ along_tree
-    closing = _wrapped(difference - expected)
-    weight = magnitude[used] / (impedance * network.tap[used])
-    normal = difference_of.T @ sparse.diags_array(weight) @ difference_of
-    hold = np.zeros(n_bus)
-    hold[reference] = weight.max()
-    angle = splu(sparse.csc_matrix(normal + sparse.diags_array(hold))).solve(
-        difference_of.T @ (weight * (expected + closing))
-    )
-    left_open = _wrapped(difference - difference_of @ angle)
-    return angle, float(np.rad2deg(np.abs(left_open).max()))
+    used = np.flatnonzero(branch_in_service & ((c != 0.0) | (s != 0.0)))
+    return AngleFit(network, used)(c, s)
+
+
+class AngleFit:
+    """`recover_angles` for a given set of branches, with everything prepared that the products do not change.
+
+    Parameters
+    ----------
+    used : (n_used,)
+        Positions of the branches that count.
+    """
+
+    def __init__(self, network: Network, used: IntArray) -> None:
+        self._used, self._n_bus = used, network.n_bus
+        if used.size == 0:
+            return
+        start, end = network.from_bus[used], network.to_bus[used]
+        impedance = np.hypot(network.r[used], network.x[used])
+        self._stiffness = 1.0 / (impedance * network.tap[used])
+        rows = np.arange(used.size)
+        self._difference = sparse.csr_array(
+            (
+                np.concatenate([np.ones(used.size), -np.ones(used.size)]),
+                (np.concatenate([rows, rows]), np.concatenate([start, end])),
+            ),
+            shape=(used.size, network.n_bus),
+        )
+        self._gather = sparse.csr_array(self._difference.T)
+        self._reference = _references(start, end, network.n_bus)
+        self._tree = _tree(start, end, impedance, network.n_bus)
+        n_reference = self._reference.size
+        ground = sparse.csr_array(
+            (np.ones(n_reference), (np.arange(n_reference), self._reference)), shape=(n_reference, network.n_bus)
+        )
+        self._along_tree = splu(sparse.csc_matrix(sparse.vstack([self._difference[self._tree], ground])))
+
+    def __call__(self, c: FloatArray, s: FloatArray) -> tuple[FloatArray, float]:
+        """Return angles and the largest angle left open, see `recover_angles`."""
+        if self._used.size == 0:
+            return np.zeros(self._n_bus), 0.0
+        branch_angle = np.arctan2(s[self._used], c[self._used])
+        fixed = np.zeros(self._reference.size)
+        along_tree = self._along_tree.solve(np.concatenate([branch_angle[self._tree], fixed]))
+        expected = self._difference @ along_tree
+        unwrapped = expected + _wrapped(branch_angle - expected)
+        weight = np.hypot(c[self._used], s[self._used]) * self._stiffness
+        weighted = self._difference.copy()
+        weighted.data = weighted.data * np.repeat(weight, np.diff(weighted.indptr))
+        hold = np.zeros(self._n_bus)
+        hold[self._reference] = weight.max()
+        normal = self._gather @ weighted + sparse.diags_array(hold, format="csr")
+        angle = splu(sparse.csc_matrix(normal), permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0).solve(
+            self._gather @ (weight * unwrapped)
+        )
+        left_open = _wrapped(branch_angle - self._difference @ angle)
+        return angle, float(np.rad2deg(np.abs(left_open).max()))
 
 
 def _wrapped(angle: FloatArray) -> FloatArray:

@@ -154,28 +154,21 @@ class _Stacked:
 
 def _stack(program: ConicProgram, fixed: BoolArray) -> _Stacked:
     free = ~fixed
-    held = np.where(fixed, program.lower, 0.0)
     lower = free & np.isfinite(program.lower)
     upper = free & np.isfinite(program.upper)
+
+    def matrices() -> tuple[sparse.csc_matrix, BoolArray]:
+        equality, inequality, cone = (block[:, free] if fixed.any() else block for block in program.blocks)
+        # An equation whose variables are all fixed is either true or a contradiction; the solver needs neither.
+        keep = np.diff(equality.indptr) > 0
+        identity = sparse.eye_array(int(free.sum()), format="csr")
+        parts = [equality[keep], inequality, -identity[lower[free]], identity[upper[free]], cone]
+        return sparse.csc_matrix(sparse.vstack(parts, format="csc")), keep
+
+    key = (fixed.tobytes(), lower.tobytes(), upper.tobytes())
+    a, keep = program.derived("clarabel", key, matrices)
+    held = np.where(fixed, program.lower, 0.0)
     equality_rhs = program.equality_rhs - program.equality @ held
-    equality = program.equality[:, free] if fixed.any() else program.equality
-    # An equation whose variables are all fixed is either true or a contradiction; the solver needs neither.
-    keep = np.diff(equality.indptr) > 0
-    contradiction = bool(np.any(np.abs(equality_rhs[~keep]) > 1e-7))
-    inequality = program.inequality[:, free] if fixed.any() else program.inequality
-    cone = program.cone[:, free] if fixed.any() else program.cone
-    identity = sparse.eye_array(int(free.sum()), format="csr")
-    a = sparse.vstack(
-        [
-            equality if keep.all() else equality[keep],
-            inequality,
-            -identity[lower[free]],
-            identity[upper[free]],
-            cone,
-        ],
-        format="csc",
-    )
-    a.eliminate_zeros()
     b = np.concatenate(
         [
             equality_rhs[keep],
@@ -187,12 +180,12 @@ def _stack(program: ConicProgram, fixed: BoolArray) -> _Stacked:
     )
     return _Stacked(
         free=free,
-        a=sparse.csc_matrix(a),
+        a=a,
         b=b,
         keep_equality=keep,
         lower=lower,
         upper=upper,
-        contradiction=contradiction,
+        contradiction=bool(np.any(np.abs(equality_rhs[~keep]) > 1e-7)),
     )
 
 
@@ -217,8 +210,7 @@ def _solve_once(
         clarabel.NonnegativeConeT(n_inequality + n_lower + n_upper),
         *[clarabel.SecondOrderConeT(int(size)) for size in program.cone_sizes],
     ]
-    quadratic = sparse.csc_matrix(sparse.diags_array(scale * program.quadratic[free], format="csc"))
-    quadratic.eliminate_zeros()
+    quadratic = _diagonal(scale * program.quadratic[free])
     start = time.perf_counter()
     solver = clarabel.DefaultSolver(
         quadratic, scale * program.linear[free], stacked.a, stacked.b, cones, _settings(tolerances, attempt)
@@ -276,3 +268,10 @@ def _settings(tolerances: Tolerances, attempt: _Attempt) -> clarabel.DefaultSett
     for key, value in attempt.settings:
         setattr(settings, key, value)
     return settings
+
+
+def _diagonal(values: FloatArray) -> sparse.csc_matrix:
+    """Return the diagonal matrix of the values without stored zeros."""
+    used = np.flatnonzero(values)
+    pointer = np.searchsorted(used, np.arange(values.size + 1))
+    return sparse.csc_matrix((values[used], used, pointer), shape=(values.size, values.size))

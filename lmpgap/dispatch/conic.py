@@ -17,7 +17,9 @@ so that y is the rise of cost per unit of right-hand side, and z the fall of cos
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Callable
+from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 from scipy import sparse
@@ -29,7 +31,12 @@ from lmpgap.tolerances import Tolerances
 
 @dataclass(frozen=True, kw_only=True)
 class ConicProgram:
-    """The blocks of the module docstring; costs in $/h, variables per unit."""
+    """The blocks of the module docstring; costs in $/h, variables per unit.
+
+    ``workspace`` holds matrices that were derived from the blocks (transposes, a solver's stacking). It is handed on
+    by `dataclasses.replace`, so that programs that differ in vectors only share it; whoever reads it checks that the
+    blocks are still the ones it was made from.
+    """
 
     linear: FloatArray
     quadratic: FloatArray
@@ -43,6 +50,20 @@ class ConicProgram:
     cone: sparse.csr_array
     cone_rhs: FloatArray
     cone_sizes: IntArray
+    workspace: dict[str, Any] = field(default_factory=dict, repr=False, compare=False)
+
+    @property
+    def blocks(self) -> tuple[sparse.csr_array, sparse.csr_array, sparse.csr_array]:
+        """The three matrices."""
+        return self.equality, self.inequality, self.cone
+
+    def derived(self, name: str, key: object, make: Callable[[], Any]) -> Any:
+        """Return what ``make`` derives from the matrices, made anew only where they or the key changed."""
+        kept = self.workspace.get(name)
+        if kept is None or kept[1] != key or any(a is not b for a, b in zip(kept[0], self.blocks, strict=True)):
+            kept = (self.blocks, key, make())
+            self.workspace[name] = kept
+        return kept[2]
 
     @property
     def n_var(self) -> int:
@@ -134,14 +155,17 @@ def cone_tail_norm(values: FloatArray, cone_sizes: IntArray) -> FloatArray:
 
 def stationarity(program: ConicProgram, solution: ConicSolution) -> FloatArray:
     """Return the left side of the stationarity condition, shape (n_var,) [$/h per unit of the variable]."""
+    equality, inequality, cone = program.derived(
+        "transposed", None, lambda: tuple(sparse.csr_array(block.T) for block in program.blocks)
+    )
     return np.asarray(
         program.linear
         + program.quadratic * solution.x
-        - program.equality.T @ solution.equality_dual
-        + program.inequality.T @ solution.inequality_dual
+        - equality @ solution.equality_dual
+        + inequality @ solution.inequality_dual
         - solution.lower_dual
         + solution.upper_dual
-        + program.cone.T @ solution.cone_dual
+        + cone @ solution.cone_dual
     )
 
 

@@ -8,12 +8,13 @@ from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+from scipy import sparse
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, solve_program, stationarity_system
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork, bus_list, live_buses, live_network
-from lmpgap.dispatch.program_builder import Affine, ProgramTemplate
+from lmpgap.dispatch.program_builder import Affine, ProgramBuilder, ProgramTemplate
 from lmpgap.dispatch.result import (
     BalanceMultipliers,
     ConstraintRows,
@@ -24,7 +25,7 @@ from lmpgap.dispatch.result import (
 )
 from lmpgap.dispatch.supply import SupplyResult, pattern_key, read_supply
 from lmpgap.errors import LmpgapError
-from lmpgap.scenario.network import BoolArray, IntArray, IntervalInputs, Network
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -33,13 +34,31 @@ class ConvexModel:
 
     Attributes
     ----------
-    expressions
-        Named quantities to read back from a solution.
+    readout : sparse (n_row, n_var)
+        Coefficients of all quantities to read back from a solution, one below the other.
+    readout_constant : (n_row,)
+    readout_rows
+        Slice of each named quantity.
     """
 
     live: LiveNetwork
     template: ProgramTemplate
-    expressions: dict[str, Affine]
+    readout: sparse.csr_array
+    readout_constant: FloatArray
+    readout_rows: dict[str, slice]
+
+    def read(self, x: FloatArray) -> dict[str, FloatArray]:
+        """Return the named quantities at a solution."""
+        values = self.readout @ x + self.readout_constant
+        return {name: values[rows] for name, rows in self.readout_rows.items()}
+
+
+def convex_model(live: LiveNetwork, builder: ProgramBuilder, quantities: dict[str, Affine]) -> ConvexModel:
+    """Return the finished program, and how to read the named quantities from its solution."""
+    readout, constant, rows = builder.readout(quantities)
+    return ConvexModel(
+        live=live, template=builder.build(), readout=readout, readout_constant=constant, readout_rows=rows
+    )
 
 
 @dataclass(frozen=True, kw_only=True)

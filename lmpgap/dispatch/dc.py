@@ -16,14 +16,14 @@ import numpy as np
 from scipy import sparse
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
-from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading
+from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading, convex_model
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.linear_model import linear_branches
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined
 from lmpgap.dispatch.supply import (
     add_flow_limits,
     add_supply,
@@ -109,11 +109,7 @@ class DcDispatch(ConvexDispatch):
 
         add_flow_limits(builder, live, flow_limits, p_from, penalties)
         self._extend(builder, live, inputs)
-        return ConvexModel(
-            live=live,
-            template=builder.build(),
-            expressions={"flow": flow, "loss": loss, "difference": across},
-        )
+        return convex_model(live, builder, {"flow": flow, "loss": loss, "difference": across})
 
     def _fill(self, model: ConvexModel, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConicProgram:
         live, penalties = model.live, self.options.penalties
@@ -137,7 +133,8 @@ class DcDispatch(ConvexDispatch):
         flow_limits: FlowLimits,
     ) -> Reading:
         live, template, x = model.live, model.template, solution.x
-        flow, loss, difference = (model.expressions[name].value(template, x) for name in ("flow", "loss", "difference"))
+        value = model.read(x)
+        flow, loss, difference = value["flow"], value["loss"], value["difference"]
         slope = self._loss_slope(live, flow)
         susceptance = self.linear.susceptance[live.branch]
         none = np.zeros(self.network.n_branch)
@@ -191,7 +188,7 @@ class DcDispatch(ConvexDispatch):
             tolerances=tolerances,
             base_mva=base,
         )
-        parts = []
+        parts: list[ConstraintRows] = []
         rated = live.branch[rated_branches(live)]
         rating = network.normal_rating[rated]
         soft = at_penalty(
@@ -249,4 +246,4 @@ class DcDispatch(ConvexDispatch):
                 base_mva=base,
             )
         )
-        return ConstraintRows.concatenate(parts, network.n_branch)
+        return joined(parts, network.n_branch)

@@ -204,6 +204,11 @@ class ProgramBuilder:
             inequality_constant=_constants(self._inequalities),
         )
 
+    def readout(self, quantities: dict[str, Affine]) -> tuple[sparse.csr_array, FloatArray, dict[str, slice]]:
+        """Return coefficients, constants and row slices of quantities to be read from a solution."""
+        matrix, rhs, slices = self._stack({name: (q, np.zeros(q.size)) for name, q in quantities.items()})
+        return matrix, -rhs, slices
+
     def _matrix(self, expression: Affine) -> sparse.coo_array:
         """Return the expression's coefficients over all variables."""
         rows, columns, data = [], [], []

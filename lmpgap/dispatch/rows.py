@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import lru_cache
 
 import numpy as np
 from scipy import sparse
@@ -49,12 +50,12 @@ def constraint_rows(
     """
     threshold = np.maximum(tolerances.active_slack_mw / base_mva, tolerances.active_slack_relative * np.abs(limit))
     shown: IntArray = np.flatnonzero((multiplier / to_unit > tolerances.shadow_price) | (slack <= threshold))
+    if shown.size == 0:
+        return _no_rows(n_branch)
     if isinstance(direction, str):
         directions: tuple[str, ...] = (direction,) * shown.size
     else:
         directions = tuple("forward" if forward else "reverse" for forward in direction[shown].tolist())
-    at = (np.arange(shown.size), owner[shown])
-    gain = np.zeros(0) if angle_gain is None else angle_gain[shown]
     return ConstraintRows(
         kind=(kind,) * shown.size,
         contingency=("",) * shown.size,
@@ -65,9 +66,7 @@ def constraint_rows(
         limit=limit[shown],
         value=value[shown],
         multiplier=np.maximum(multiplier[shown], 0.0),
-        angle_gain=sparse.csr_array((shown.size, n_branch))
-        if angle_gain is None
-        else sparse.csr_array((gain, at), shape=(shown.size, n_branch)),
+        angle_gain=_gain(owner[shown], None if angle_gain is None else angle_gain[shown], n_branch),
         at_penalty=np.zeros(shown.size, dtype=bool) if gave_way is None else gave_way[shown],
     )
 
@@ -83,7 +82,7 @@ def flow_limit_rows(
     tolerances: Tolerances,
     base_mva: float,
 ) -> ConstraintRows:
-    """Return the rows of contingencies and interfaces.
+    """Return the rows of contingencies and interfaces, where they have a shadow price or are active.
 
     Parameters
     ----------
@@ -92,12 +91,16 @@ def flow_limit_rows(
     multiplier : (n_row,)
         [$/h per pu]
     """
+    if flow_limits.n_row == 0:
+        return _no_rows(p_from.size)
     value = np.asarray(flow_limits.weights @ p_from)
     slack = flow_limits.limit - value
     threshold = np.maximum(
         tolerances.active_slack_mw / base_mva, tolerances.active_slack_relative * np.abs(flow_limits.limit)
     )
     shown: IntArray = np.flatnonzero((multiplier / base_mva > tolerances.shadow_price) | (slack <= threshold))
+    if shown.size == 0:
+        return _no_rows(p_from.size)
     gave_way = at_penalty(multiplier, excess, penalty, tolerances, base_mva)
     return ConstraintRows(
         kind=tuple(flow_limits.kind[i] for i in shown.tolist()),
@@ -137,3 +140,20 @@ def at_penalty(
     price = multiplier / base_mva
     stands = np.abs(price - penalty) <= tolerances.penalty_match * abs(penalty)
     return np.asarray(stands | (excess > tolerances.active_slack_mw / base_mva))
+
+
+def joined(parts: Sequence[ConstraintRows], n_branch: int) -> ConstraintRows:
+    """Return all rows of the parts, most of which are empty in most intervals."""
+    return ConstraintRows.concatenate([part for part in parts if part.n_row], n_branch)
+
+
+@lru_cache(maxsize=8)
+def _no_rows(n_branch: int) -> ConstraintRows:
+    return ConstraintRows.none(n_branch)
+
+
+def _gain(owner: IntArray, gain: FloatArray | None, n_branch: int) -> sparse.csr_array:
+    """Return one row per entry with its gain at its own branch, or empty rows, shape (n, n_branch)."""
+    if gain is None:
+        return sparse.csr_array((owner.size, n_branch))
+    return sparse.csr_array((gain, owner, np.arange(owner.size + 1)), shape=(owner.size, n_branch))

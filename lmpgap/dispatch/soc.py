@@ -23,10 +23,10 @@ from dataclasses import replace
 
 import numpy as np
 
-from lmpgap.dispatch.angles import recover_angles
+from lmpgap.dispatch.angles import AngleFit
 from lmpgap.dispatch.branch_model import BranchModel, operating_point
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
-from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading
+from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading, convex_model
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
@@ -53,6 +53,7 @@ class SocDispatch(ConvexDispatch):
     def __init__(self, network: Network, branch_in_service: BoolArray, options: DispatchOptions) -> None:
         super().__init__(network, branch_in_service, options)
         self._branches = BranchModel.of(network, branch_in_service)
+        self._fit: tuple[LiveNetwork, AngleFit] | None = None
 
     def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
         network, penalties = self.network, self.options.penalties
@@ -114,10 +115,10 @@ class SocDispatch(ConvexDispatch):
             row = across.take(limited) - (u - drop).take(limited).scaled(tangent)
             builder.at_most(f"angle {name}", row.scaled(sign), 0.0)
         add_flow_limits(builder, live, flow_limits, p_from, penalties)
-        return ConvexModel(
-            live=live,
-            template=builder.build(),
-            expressions={
+        return convex_model(
+            live,
+            builder,
+            {
                 "p_from": p_from,
                 "q_from": q_from,
                 "p_to": p_to,
@@ -159,7 +160,7 @@ class SocDispatch(ConvexDispatch):
         flow_limits: FlowLimits,
     ) -> Reading:
         live, template, network = model.live, model.template, self.network
-        value = {name: e.value(template, solution.x) for name, e in model.expressions.items()}
+        value = model.read(solution.x)
         w = solution.x[template.variables["w"]]
         point, loop_angle_deg = self._point(live, value, w)
         multipliers = BalanceMultipliers(
@@ -190,7 +191,9 @@ class SocDispatch(ConvexDispatch):
         """
         network = self.network
         c, s = live.to_branches(value["c"]), live.to_branches(value["s"])
-        angle, loop_angle_deg = recover_angles(network, self.branch_in_service, c, s)
+        if self._fit is None or self._fit[0] is not live:
+            self._fit = (live, AngleFit(network, live.branch))
+        angle, loop_angle_deg = self._fit[1](c, s)
         point = operating_point(network, self._branches, live.to_buses(w, 0.0), c, s, angle)
         # Rebuilt from w, c and s the flows would carry the solver's residual times the admittance.
         own = replace(

@@ -10,7 +10,7 @@ from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined
 from lmpgap.dispatch.supply import rated_branches
 from lmpgap.scenario.network import FloatArray, IntArray, IntervalInputs, Network
 
@@ -39,7 +39,7 @@ def soc_constraints(
     options: DispatchOptions,
 ) -> ConstraintRows:
     """Return all rows with a shadow price or active."""
-    parts = [
+    parts: list[ConstraintRows] = [
         *_thermal(network, model, solution, point, options),
         *_angle(network, model, solution, point, options),
         *_voltage(network, model, solution, point, options),
@@ -59,7 +59,7 @@ def soc_constraints(
             base_mva=network.base_mva,
         )
     )
-    return ConstraintRows.concatenate(parts, network.n_branch)
+    return joined(parts, network.n_branch)
 
 
 def _thermal(
@@ -81,7 +81,7 @@ def _thermal(
         options.tolerances,
         base,
     )
-    parts = []
+    parts: list[ConstraintRows] = []
     for end, p, q, dp, dq in (
         ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
         ("to", point.p_to, point.q_to, point.dp_to, point.dq_to),
@@ -120,7 +120,7 @@ def _angle(
     options: DispatchOptions,
 ) -> list[ConstraintRows]:
     """Angle limits: the row's multiplier times its derivative along the angle is the multiplier per radian."""
-    parts = []
+    parts: list[ConstraintRows] = []
     for side, sign, limit in (("upper", 1.0, network.angle_max), ("lower", -1.0, network.angle_min)):
         limited, tangent = angle_limits(network, model.live, side)
         branch = model.live.branch[limited]
@@ -194,7 +194,7 @@ def _reactive(
     """Reactive ranges of the resources in service."""
     where = model.template.variables["q"]
     q, base = solution.x[where], network.base_mva
-    parts = []
+    parts: list[ConstraintRows] = []
     for side, sign, limit, dual in (
         ("upper", 1.0, program.upper[where], solution.upper_dual[where]),
         ("lower", -1.0, program.lower[where], solution.lower_dual[where]),
