@@ -7,11 +7,11 @@ import typer
 from lmpgap.cli.check import check
 from lmpgap.cli.price import compare, price
 from lmpgap.cli.settle import settle
-from lmpgap.cli.sweep import sweep
+from lmpgap.cli.sweep import ageing, sweep
 from lmpgap.cli.verify import verify
 from lmpgap.cli.weekly import weekly
 
-COMMANDS = (check, price, compare, settle, weekly, sweep, verify)
+COMMANDS = (check, price, compare, settle, weekly, sweep, ageing, verify)
 
 
 def register(app: typer.Typer) -> None:

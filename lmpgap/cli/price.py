@@ -34,12 +34,22 @@ def price(
     uniqueness: Annotated[
         bool, typer.Option("--uniqueness/--no-uniqueness", help="Search price intervals where prices are not unique.")
     ] = True,
+    losses: Annotated[
+        str,
+        typer.Option(
+            "--losses", help="Losses of dc-loss: `own` (of its own flows) or `table` (the scenario's delivery_factors)."
+        ),
+    ] = "own",
     factors_from: Annotated[
         Path | None,
         typer.Option(
-            "--factors-from", metavar="RUN", help="Freeze the losses of dc-loss at the AC operating points of this run."
+            "--factors-from", metavar="RUN", help="Freeze the losses of dc-loss at this run's operating points."
         ),
     ] = None,
+    factors_age: Annotated[
+        float,
+        typer.Option("--factors-age", min=0.0, help="With --factors-from: how old the operating point is, in hours."),
+    ] = 0.0,
     json: JsonOption = False,
 ) -> None:
     """Solve every interval, split and certify every price, and store all of it in a run folder.
@@ -50,20 +60,30 @@ def price(
     Example: lmpgap price scenarios/demo --formulations dc,soc,ac --run runs/demo --workers 2
     """
     chosen = parse_formulations(formulations)
+    if losses not in ("own", "table") or (losses == "table" and factors_from is not None):
+        raise typer.BadParameter("`own` or `table`, and not together with --factors-from", param_hint="--losses")
+    import pandas as pd
+
+    from lmpgap.runs.folder import RunFolder
+    from lmpgap.runs.given_losses import FactorTable, FrozenPoints, LossSource
     from lmpgap.runs.price import price as price_scenario
     from lmpgap.runs.summary import summarise_run
     from lmpgap.scenario.read import read_scenario
 
+    read = read_scenario(scenario)
+    source: LossSource | None = FactorTable(read) if losses == "table" else None
+    if factors_from is not None:
+        source = FrozenPoints(read, RunFolder(factors_from), age=pd.Timedelta(hours=factors_age))
     with terminal_progress() as progress:
         folder = price_scenario(
-            read_scenario(scenario),
+            read,
             run,
             formulations=chosen,
             workers=workers,
             cluster=cluster,
             progress=progress,
             uniqueness=uniqueness,
-            factors_from=factors_from,
+            losses=source,
         )
     summary = summarise_run(folder)
     if json:

@@ -1,4 +1,4 @@
-"""`sweep`: how the divergence grows with loading."""
+"""`sweep` and `ageing`: how divergences grow with loading, and with the age of loss factors."""
 
 from __future__ import annotations
 
@@ -10,6 +10,7 @@ import typer
 from lmpgap.cli.shared import (
     FORMULATIONS_HELP,
     JsonOption,
+    RunArgument,
     ScenarioArgument,
     echo,
     echo_json,
@@ -69,6 +70,37 @@ def sweep(
     echo_table(table)
     if out is not None:
         echo(f"\npicture: {out}")
+
+
+def ageing(
+    run: RunArgument,
+    ages: Annotated[str, typer.Option("--ages", help="Ages of the operating points in hours.")] = "0,1,3,6,12,24",
+    scenario: Annotated[
+        Path | None, typer.Option("--scenario", metavar="SCENARIO", help="Scenario folder, if it moved since the run.")
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Show how dc-loss prices move with the age of the operating point behind the loss factors.
+
+    Example: lmpgap ageing runs/demo --ages 0,1,6,24
+    """
+    try:
+        chosen = [float(part) for part in ages.split(",")]
+    except ValueError:
+        raise typer.BadParameter(f"{ages!r} is not a list of hours such as 0,1,6,24", param_hint="--ages") from None
+    if min(chosen) < 0.0:
+        raise typer.BadParameter("ages are hours before the interval and not negative", param_hint="--ages")
+    from lmpgap.runs.factor_age import factor_age
+    from lmpgap.runs.folder import RunFolder
+    from lmpgap.scenario.read import read_scenario
+
+    folder = RunFolder(run)
+    with terminal_progress() as progress:
+        table = factor_age(read_scenario(scenario or folder.scenario_folder), folder, chosen, progress=progress)
+    if json:
+        echo_json(records(table))
+        return
+    echo_table(table)
 
 
 def _positions(text: str, n_interval: int) -> list[int] | None:

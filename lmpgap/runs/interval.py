@@ -12,6 +12,7 @@ from threadpoolctl import threadpool_limits
 
 from lmpgap.dispatch.ac_check import ac_check
 from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
+from lmpgap.dispatch.frozen import DeliveryFactorDispatch, FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits, interface_limits
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import DispatchResult
@@ -21,6 +22,7 @@ from lmpgap.prices.components import PriceSplit, split_prices
 from lmpgap.prices.money import money_balance
 from lmpgap.prices.uniqueness import price_intervals
 from lmpgap.runs.fingerprint import fingerprint
+from lmpgap.runs.given_losses import GivenLosses
 from lmpgap.runs.plan import PlannedInterval, RunSettings
 from lmpgap.runs.rows import SolvedInterval, chunk_tables
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
@@ -84,9 +86,9 @@ def solve_interval(
     results: dict[str, tuple[DispatchResult, FlowLimits]] = {}
     for name in planned.keys:
         if name == "ac" and "soc" not in results:
-            results["soc"] = _solve(space, "soc", planned.inputs, None)
+            results["soc"] = _solve(space, "soc", planned, None)
         start = results["soc"][0] if name == "ac" else None
-        results[name] = _solve(space, name, planned.inputs, start)
+        results[name] = _solve(space, name, planned, start)
     ac = results["ac"][0] if "ac" in results else None
     return [
         _priced(space, planned, name, *results[name], ac=ac, settings=settings, hours=hours) for name in planned.keys
@@ -94,13 +96,26 @@ def solve_interval(
 
 
 def _solve(
-    space: Workspace, name: str, inputs: IntervalInputs, start: DispatchResult | None
+    space: Workspace, name: str, planned: PlannedInterval, start: DispatchResult | None
 ) -> tuple[DispatchResult, FlowLimits]:
+    inputs = planned.inputs
     limits = interface_limits(space.network, inputs)
-    formulation = space.formulation(name)
+    given = planned.given if name == "dc-loss" else None
+    formulation = space.formulation(name) if given is None else _with_given_losses(space, given, planned.weights)
     if space.outages is None:
         return formulation.solve(inputs, limits, start), limits
     return solve_secure(formulation, inputs, limits, space.outages, space.options.tolerances, start)
+
+
+def _with_given_losses(space: Workspace, given: GivenLosses, weights: FloatArray) -> Formulation:
+    """Return `dc-loss` with losses frozen at a base dispatch, or with a table of delivery factors."""
+    network, on, options = space.network, space.branch_in_service, space.options
+    if given.delivery_factor is not None:
+        return DeliveryFactorDispatch(
+            network, on, options, delivery_factor=given.delivery_factor, loss_distribution=weights
+        )
+    proximal = options.tolerances.proximal_at_base if given.same_interval else options.tolerances.proximal_away
+    return FrozenLossDispatch(network, on, options, given.base(network), proximal=proximal)
 
 
 def _priced(

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import asdict, dataclass, field
+from dataclasses import asdict, dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -11,6 +11,7 @@ import numpy as np
 from lmpgap.dispatch.names import FORMULATIONS
 from lmpgap.errors import LmpgapError
 from lmpgap.runs.fingerprint import fingerprint
+from lmpgap.runs.given_losses import GivenLosses, LossSetting, LossSource
 from lmpgap.scenario.network import FloatArray, IntervalInputs
 from lmpgap.scenario.scenario import Scenario
 from lmpgap.scenario.settings import DcConvention, Penalties, Reference
@@ -34,6 +35,8 @@ class RunSettings:
         Search price intervals where prices may not be unique.
     reactive_sources
         How many sources of the reactive component to list by bus; the rest is gathered in one row.
+    losses
+        Where the losses of ``dc-loss`` come from.
     """
 
     reference: Reference = field(default_factory=Reference)
@@ -42,6 +45,7 @@ class RunSettings:
     tolerances: Tolerances = DEFAULT_TOLERANCES
     uniqueness: bool = True
     reactive_sources: int = 8
+    losses: LossSetting = field(default_factory=LossSetting)
 
     @staticmethod
     def of(scenario: Scenario, **changes: Any) -> RunSettings:
@@ -77,6 +81,7 @@ class PlannedInterval:
     inputs: IntervalInputs
     weights: FloatArray
     keys: Mapping[str, str]
+    given: GivenLosses | None = None
 
 
 class Plan:
@@ -89,6 +94,8 @@ class Plan:
         solve depends on besides its inputs is part of its key.
     positions
         Positions of the intervals; all by default.
+    losses
+        Source of the losses that ``dc-loss`` takes as given; its own by default.
     """
 
     def __init__(
@@ -97,6 +104,7 @@ class Plan:
         formulations: tuple[str, ...],
         settings: RunSettings,
         positions: range | list[int] | None = None,
+        losses: LossSource | None = None,
     ) -> None:
         unknown = [name for name in formulations if name not in FORMULATIONS]
         if unknown or not formulations:
@@ -105,10 +113,11 @@ class Plan:
             )
         self.scenario = scenario
         self.formulations = tuple(name for name in FORMULATIONS if name in formulations)
-        self.settings = settings
+        self.settings = settings if losses is None else replace(settings, losses=losses.setting)
+        self._losses = losses
         self.positions = list(range(scenario.n_interval) if positions is None else positions)
         self._starts = scenario.starts.astype("datetime64[us]")
-        self._common = fingerprint(SOLVE_VERSION, scenario.network, settings.as_dict())
+        self._common = fingerprint(SOLVE_VERSION, scenario.network, self.settings.as_dict())
 
     @property
     def covers_all(self) -> bool:
@@ -125,12 +134,19 @@ class Plan:
         weights = self.scenario.reference_weights(position)
         content = fingerprint(self._common, inputs, weights)
         chosen = self.formulations if formulations is None else formulations
+        given = self._losses.at(position) if self._losses is not None and "dc-loss" in chosen else None
         return PlannedInterval(
             position=position,
             start=self._starts[position],
             inputs=inputs,
             weights=weights,
-            keys={name: fingerprint(content, name, name == "soc" and "ac" in chosen)[:32] for name in chosen},
+            keys={
+                name: fingerprint(
+                    content, name, name == "soc" and "ac" in chosen, given if name == "dc-loss" else None
+                )[:32]
+                for name in chosen
+            },
+            given=given,
         )
 
     def chunks(self, wanted: Mapping[int, tuple[str, ...]], workers: int) -> Iterator[list[PlannedInterval]]:

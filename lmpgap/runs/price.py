@@ -21,6 +21,7 @@ from lmpgap.errors import LmpgapError, MissingExtraError, RunFolderError
 from lmpgap.progress import Progress, silent
 from lmpgap.runs.fingerprint import fingerprint
 from lmpgap.runs.folder import FORMAT, RunFolder
+from lmpgap.runs.given_losses import LossSource
 from lmpgap.runs.plan import Plan, PlannedInterval, RunSettings, ledger_entry, settings_differences
 from lmpgap.runs.schema import SOLVED_TABLES
 from lmpgap.scenario.scenario import Scenario
@@ -39,6 +40,7 @@ def price(
     cluster: str | None = None,
     progress: Progress = silent,
     positions: list[int] | None = None,
+    losses: LossSource | None = None,
     **settings: Any,
 ) -> RunFolder:
     """Solve every interval under the chosen formulations, price and certify it, and store the result.
@@ -57,6 +59,8 @@ def price(
         Address of a Dask scheduler; chunks then go to its workers (extra ``cluster``).
     positions
         Positions of the intervals to solve; all by default.
+    losses
+        Where the losses of ``dc-loss`` come from (`lmpgap.runs.given_losses`); its own flows by default.
     settings
         Fields of `lmpgap.runs.plan.RunSettings` that differ from the scenario's.
 
@@ -69,7 +73,7 @@ def price(
     RunFolderError
         When the folder was made with other settings (each difference is named), is in use, or cannot be written.
     """
-    plan = Plan(scenario, formulations, RunSettings.of(scenario, **settings), positions)
+    plan = Plan(scenario, formulations, RunSettings.of(scenario, **settings), positions, losses)
     folder = RunFolder(run, create=True)
     with folder.writing():
         _check_settings(folder, plan)
