@@ -20,7 +20,8 @@ from lmpgap.scenario.typed import NOT_A_TIME, TextColumn, TimeArray
 
 _HOUR_LABEL = re.compile(r"(\d{4}-\d{2}-\d{2})[ T]+(?:HE|H|hour)? ?0*(\d{1,2})(\*?)", re.IGNORECASE)
 _MIDNIGHT_AT_END = re.compile(r"(\d{4}-\d{2}-\d{2})[ T]24:00(?::00(?:\.0+)?)?")
-_LONGEST_LABEL = 40
+_SHORTEST_LABEL, _LONGEST_LABEL = len("2026-11-01 1"), 40
+"""A date alone is no time of day."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -161,7 +162,7 @@ def _alone(group: IntArray, code: IntArray) -> BoolArray:
 
 def _parse(value: str, rule: ClockRule) -> _Label | None:
     value = value.strip()
-    if not value or len(value) > _LONGEST_LABEL:
+    if not _SHORTEST_LABEL <= len(value) <= _LONGEST_LABEL:
         return None
     try:
         if match := _HOUR_LABEL.fullmatch(value):

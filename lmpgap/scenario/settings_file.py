@@ -194,9 +194,8 @@ SECTIONS: Mapping[str, Mapping[str, Key]] = {
 
 def read_settings(text: str | None, log: FaultLog, *, file: str = SETTINGS_FILE) -> ScenarioSettings:
     """Return the settings that the text of `scenario.toml` holds; what is faulty takes its default."""
-    data: dict[str, Any] = {}
-    if text is not None:
-        data = _load(text, log, file)
+    loaded = None if text is None else _load(text, log, file)
+    data = loaded or {}
     values: dict[str, dict[str, Any]] = {section: {} for section in SECTIONS}
     for section, content in data.items():
         keys = SECTIONS.get(section)
@@ -218,7 +217,7 @@ def read_settings(text: str | None, log: FaultLog, *, file: str = SETTINGS_FILE)
             log.fault(file, "is a section, not a value", column=section, row=_line_of(text, section, None))
         else:
             _read_section(section, keys, content, values[section], text, log, file)
-    if text is not None and data and "name" not in values["scenario"] and not _has(data, "scenario", "name"):
+    if loaded is not None and not _has(data, "scenario", "name"):
         log.fault(file, "the key is missing: name of the scenario", column="[scenario] name", allowed="text in quotes")
     settings = values["scenario"]
     return ScenarioSettings(
@@ -236,10 +235,10 @@ def _has(data: Mapping[str, Any], section: str, key: str) -> bool:
     return isinstance(data.get(section), dict) and key in data[section]
 
 
-def _load(text: str, log: FaultLog, file: str) -> dict[str, Any]:
+def _load(text: str, log: FaultLog, file: str) -> dict[str, Any] | None:
     if len(text) > _MAXIMUM_SIZE:
         log.fault(file, "is too large for settings", allowed="up to a million characters")
-        return {}
+        return None
     try:
         return tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
@@ -251,7 +250,7 @@ def _load(text: str, log: FaultLog, file: str) -> dict[str, Any]:
         )
     except (RecursionError, ValueError, OverflowError):
         log.fault(file, "is not valid TOML: it is nested too deep or holds an impossible value")
-    return {}
+    return None
 
 
 def _read_section(
