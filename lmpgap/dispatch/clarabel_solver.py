@@ -55,20 +55,17 @@ class _Attempt:
 
 
 _ATTEMPTS = (
+    # Solved each of nine networks of 118 to 6,515 buses at once; the solver's own defaults left two of them unfinished.
+    _Attempt(
+        label="firm regularisation",
+        settings=(("static_regularization_constant", 1e-7), ("equilibrate_max_iter", 50)),
+    ),
     _Attempt(label="standard settings"),
     _Attempt(
-        label="more equilibration and refinement",
-        settings=(
-            ("equilibrate_max_iter", 50),
-            ("iterative_refinement_max_iter", 50),
-            ("static_regularization_constant", 1e-9),
-        ),
+        label="no equilibration",
+        settings=(("static_regularization_constant", 1e-7), ("equilibrate_enable", False)),
     ),
     _Attempt(label="a tenth of the cost scale", scale_factor=0.1),
-    _Attempt(
-        label="stronger static regularisation",
-        settings=(("static_regularization_constant", 1e-7), ("iterative_refinement_max_iter", 50)),
-    ),
 )
 
 
@@ -117,7 +114,7 @@ def solve_conic(program: ConicProgram, tolerances: Tolerances) -> tuple[ConicSol
     stacked = _stack(program, fixed)
     answers: list[ConicSolution] = []
     for attempt in _ATTEMPTS:
-        answers.append(_solve_once(program, fixed, stacked, tolerances, attempt))
+        answers.append(_confirmed(program, _solve_once(program, fixed, stacked, tolerances, attempt), tolerances))
         if answers[-1].status in _SETTLED:
             break
     settled = answers[-1].status in _SETTLED
@@ -127,6 +124,30 @@ def solve_conic(program: ConicProgram, tolerances: Tolerances) -> tuple[ConicSol
         tried = ", then ".join(attempt.label for attempt in _ATTEMPTS[: len(answers)])
         notes = (f"{name} was asked {len(answers)} times: {tried}; taken: {best.message}",)
     return replace(best, seconds=sum(answer.seconds for answer in answers)), notes
+
+
+def _confirmed(program: ConicProgram, solution: ConicSolution, tolerances: Tolerances) -> ConicSolution:
+    """Return an answer the solver calls inaccurate as optimal where its residuals say that it is.
+
+    They are computed from the matrices and held against ten times the tolerance that the solver was given, in its
+    own measure: relative to the sizes of right-hand side, cost coefficients and cost. That is still far below what a
+    price needs; the solver stops there because the factorisation has no more digits to give.
+    """
+    if solution.status is not SolveStatus.INACCURATE:
+        return solution
+    measured = residuals(program, solution)
+    tolerance = 10.0 * tolerances.conic_feasibility
+    price = 1.0 + float(np.abs(program.linear).max(initial=0.0))
+    good = (
+        measured.primal <= tolerance * (1.0 + float(np.abs(program.equality_rhs).max(initial=0.0)))
+        and measured.dual <= tolerance * price
+        and measured.gap <= tolerance * (1.0 + abs(program.cost(solution.x)))
+    )
+    return (
+        replace(solution, status=SolveStatus.OPTIMAL, message=f"{solution.message}, confirmed by its residuals")
+        if good
+        else solution
+    )
 
 
 def _error(program: ConicProgram, solution: ConicSolution) -> float:
