@@ -14,6 +14,7 @@ import stat
 from collections import defaultdict
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cache
 from itertools import islice
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -26,6 +27,8 @@ from lmpgap.scenario.tables import TABLES
 from lmpgap.scenario.typed import Lines, RawColumn, TextColumn, row_numbers
 
 if TYPE_CHECKING:
+    from _csv import Reader
+
     import pyarrow as pa
 
 FORMATS = (".csv", ".parquet")
@@ -160,7 +163,7 @@ def _first_line(text: str) -> str | None:
     return next((line for line in io.StringIO(text) if line.strip()), None)
 
 
-def _reader(text: str, delimiter: str) -> Iterator[list[str]]:
+def _reader(text: str, delimiter: str) -> Reader:
     return csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
 
 
@@ -172,7 +175,7 @@ def _chunks(text: str, delimiter: str) -> Iterator[list[list[str]]]:
 
 def _last_good_line(text: str, delimiter: str) -> int:
     """Return the line on which the last record before a broken one ends."""
-    reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
+    reader = _reader(text, delimiter)
     line = 0
     try:
         for _ in reader:
@@ -235,8 +238,9 @@ class _Coder:
         """Return the table; rows of the wrong width become faults."""
         delimiter, skipped = self._delimiter, np.asarray(self._skipped, dtype=np.int64)
 
+        @cache
         def line_of_record() -> IntArray:
-            reader = csv.reader(io.StringIO(text, newline=""), delimiter=delimiter, strict=True)
+            reader = _reader(text, delimiter)
             ends = np.fromiter((reader.line_num for _ in reader), np.int64)
             # A record starts on the line after the one before it ends.
             return np.concatenate([[1], ends[:-1] + 1]).astype(np.int64)
