@@ -122,6 +122,11 @@ class ConvexDispatch(ABC):
             )
         return self._result(model, program, solution, inputs, flow_limits, notes, began)
 
+    def program(self, inputs: IntervalInputs, flow_limits: FlowLimits) -> tuple[ConvexModel, ConicProgram]:
+        """Return the model and the filled program of one interval, as they are solved."""
+        model = self._model_for(inputs, flow_limits)
+        return model, self._fill(model, inputs, flow_limits)
+
     @abstractmethod
     def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
         """Return the matrices for a live network and a pattern of offers."""
