@@ -91,7 +91,7 @@ def build_contingencies(tables: Mapping[str, ColumnTable], branch_positions: Map
     order = np.argsort(group, kind="stable")
     parts = np.split(branch[order], np.cumsum(np.bincount(group, minlength=len(names)))[:-1])
     monitored = tables["monitored"]
-    if monitored.given:
+    if monitored.n_row:
         mask = np.zeros(len(branch_positions), dtype=bool)
         mask[monitored.text("branch").positions(branch_positions)] = True
     else:

@@ -245,9 +245,12 @@ class _Coder:
             # A record starts on the line after the one before it ends.
             return np.concatenate([[1], ends[:-1] + 1]).astype(np.int64)
 
+        @cache
+        def line_of_row() -> IntArray:
+            return np.asarray(np.delete(line_of_record(), skipped)[1:])
+
         def lines(rows: IntArray) -> IntArray:
-            starts = line_of_record()
-            return np.asarray(np.delete(starts, skipped)[1:][rows])
+            return np.asarray(line_of_row()[rows])
 
         if self._wrong:
             starts = line_of_record()

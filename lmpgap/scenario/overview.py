@@ -77,7 +77,7 @@ def _monitored(scenario: Scenario) -> int:
     tables = scenario.columns
     if tables["contingencies"].n_row == 0:
         return 0
-    if tables["monitored"].given:
+    if tables["monitored"].n_row:
         return tables["monitored"].n_row
     return int(np.count_nonzero(np.isfinite(tables["branches"].number("emergency_rating_mva"))))
 

@@ -242,7 +242,8 @@ def _check_offers(table: ColumnTable, log: FaultLog) -> None:
     before, after = order[:-1], order[1:]
     joined = curve[before] == curve[after]
     gap = joined & (np.abs(start[after] - end[before]) > _CURVE_TOLERANCE_MW)
-    previous = dict(zip(after.tolist(), before.tolist(), strict=True))
+    previous = np.zeros(table.n_row, dtype=np.int64)
+    previous[after] = before
     log.rows(
         table.file,
         "segment gap",
@@ -254,7 +255,7 @@ def _check_offers(table: ColumnTable, log: FaultLog) -> None:
                 if start[row] > end[previous[row]]
                 else f"overlaps the segment before it, which ends at {end[previous[row]]:g} MW"
             )
-            + f" (line {table.lines(np.array([previous[row]]))[0]})"
+            + f" (line {table.lines(previous[[row]])[0]})"
         ),
         column="from_mw",
         value=lambda row: f"{start[row]:g}",
@@ -268,7 +269,7 @@ def _check_offers(table: ColumnTable, log: FaultLog) -> None:
         table.lines,
         lambda row: (
             f"is below the price before it, {end_price[previous[row]]:g} "
-            f"(line {table.lines(np.array([previous[row]]))[0]}): marginal prices never fall along a curve"
+            f"(line {table.lines(previous[[row]])[0]}): marginal prices never fall along a curve"
         ),
         column="price",
         value=lambda row: f"{price[row]:g}",

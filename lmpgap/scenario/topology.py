@@ -91,22 +91,8 @@ def islands(ends: Ends, branch_in_service: BoolArray) -> IntArray:
     return _spanning_forest(ends, branch_in_service).island
 
 
-def dead_buses(ends: Ends, branch_in_service: BoolArray, has_source: BoolArray) -> BoolArray:
-    """Return the buses of islands in which nothing can generate, shape (n_bus,).
-
-    Parameters
-    ----------
-    has_source : (n_bus,)
-        True where a resource in service is connected.
-    """
-    island = islands(ends, branch_in_service)
-    alive = np.zeros(int(island.max(initial=-1)) + 1, dtype=bool)
-    alive[island[has_source]] = True
-    return ~alive[island]
-
-
-def cut_labels(ends: Ends, branch_in_service: BoolArray) -> list[int]:
-    """Return a 62-bit label per branch: a set of branches some of whose labels XOR to zero splits the network.
+def cut_labels(ends: Ends, branch_in_service: BoolArray) -> IntArray:
+    """Return a 62-bit label per branch, shape (n_branch,): sets of branches that XOR to zero are cuts.
 
     Every branch outside a spanning forest gets a random label; a branch of the forest gets the XOR of the
     labels of all other branches across the cut that it defines. A set of branches contains a cut exactly if
@@ -128,14 +114,55 @@ def cut_labels(ends: Ends, branch_in_service: BoolArray) -> list[int]:
     np.bitwise_xor.at(carried, ends.to_bus, labels)
     # From the leaves up: what a subtree carries is what leaves it beside the branch above it.
     above: list[int] = carried.tolist()
-    result: list[int] = labels.tolist()
     for bus in reversed(forest.order):
         if forest.parent[bus] >= 0:
             above[forest.parent[bus]] ^= above[bus]
-            result[forest.parent_branch[bus]] = above[bus]
-    for branch in np.flatnonzero(~branch_in_service).tolist():
-        result[branch] = -1
-    return result
+            labels[forest.parent_branch[bus]] = above[bus]
+    labels[~branch_in_service] = -1
+    return labels
+
+
+def splitting(labels: IntArray, contingencies: Contingencies, out: IntArray | None = None) -> BoolArray:
+    """Return which contingencies would split the network, shape (n_contingency,).
+
+    Parameters
+    ----------
+    labels : (n_branch,)
+        As from `cut_labels`.
+    out
+        Branches that are out before the contingency, although the labels count them as in service. A
+        contingency then splits the network if it completes a cut together with some of them.
+    """
+    basis = _basis([] if out is None else labels[out].tolist())
+    reduced = labels.copy()
+    usable = labels >= 0
+    for top in sorted(basis, reverse=True):
+        hit = usable & ((reduced >> (top - 1)) & 1 == 1)
+        reduced[hit] ^= basis[top]
+    if out is not None:
+        reduced[out] = -1
+    size = np.asarray([branches.size for branches in contingencies.branches])
+    found = np.zeros(size.size, dtype=bool)
+    single = np.flatnonzero(size == 1)
+    if single.size:
+        found[single] = reduced[np.concatenate([contingencies.branches[i] for i in single])] == 0
+    for i in np.flatnonzero(size > 1).tolist():
+        together = [label for label in reduced[contingencies.branches[i]].tolist() if label >= 0]
+        found[i] = len(_basis(together)) < len(together)
+    return found
+
+
+def _basis(labels: list[int]) -> dict[int, int]:
+    """Return independent combinations of the labels by their highest bit: Gaussian elimination over bits."""
+    basis: dict[int, int] = {}
+    for label in labels:
+        while label > 0:
+            top = label.bit_length()
+            if top not in basis:
+                basis[top] = label
+                break
+            label ^= basis[top]
+    return basis
 
 
 def islanding_contingencies(ends: Ends, branch_in_service: BoolArray, contingencies: Contingencies) -> BoolArray:
@@ -146,27 +173,7 @@ def islanding_contingencies(ends: Ends, branch_in_service: BoolArray, contingenc
     branch_in_service : (n_branch,)
         The topology before the contingency; branches that are out already are no part of it.
     """
-    labels = cut_labels(ends, branch_in_service)
-    return np.asarray(
-        [_dependent([labels[branch] for branch in out.tolist()]) for out in contingencies.branches], dtype=bool
-    )
-
-
-def _dependent(labels: list[int]) -> bool:
-    """Return whether some of the labels XOR to zero: Gaussian elimination over bits."""
-    basis: dict[int, int] = {}
-    for label in labels:
-        if label < 0:
-            continue
-        while label:
-            top = label.bit_length()
-            if top not in basis:
-                basis[top] = label
-                break
-            label ^= basis[top]
-        else:
-            return True
-    return False
+    return splitting(cut_labels(ends, branch_in_service), contingencies)
 
 
 def check_topology(
@@ -219,7 +226,8 @@ def _check_contingencies(
     table, branch = tables["contingencies"], tables["branches"].text("branch")
     first = {name: row for row, name in reversed(list(enumerate(table.text("contingency").tolist())))}
     normal = source.branch_in_service
-    refused = islanding_contingencies(ends, normal, contingencies)
+    labels = cut_labels(ends, normal)
+    refused = splitting(labels, contingencies)
 
     def line(name: str) -> int:
         return int(table.lines(np.array([first[name]]))[0])
@@ -243,13 +251,12 @@ def _check_contingencies(
     spans = source.branch_outages
     changes = np.unique(np.concatenate([spans.first, spans.end]))
     for position in changes[changes < source.n_interval].tolist():
-        on = spans.apply(normal, position)
-        if np.array_equal(on, normal):
+        out = np.flatnonzero(normal & ~spans.apply(normal, position))
+        if out.size == 0:
             continue
-        for i in np.flatnonzero(islanding_contingencies(ends, on, contingencies) & ~refused).tolist():
+        for i in np.flatnonzero(splitting(labels, contingencies, out) & ~refused).tolist():
             name = contingencies.names[i]
             refused[i] = True
-            out = np.flatnonzero(normal & ~on)
             log.warn(
                 table.file,
                 f"would split the network while {branches(out)} {'are' if out.size > 1 else 'is'} out; it is not "

@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from lmpgap.scenario.network import Contingencies
 from lmpgap.scenario.read import read_scenario
-from lmpgap.scenario.topology import BranchEnds, dead_buses, islanding_contingencies, islands
+from lmpgap.scenario.topology import BranchEnds, cut_labels, islanding_contingencies, islands, splitting
 from tests.scenario.folder import BASE, HOURS, append, faults, warnings
 from tests.support.networks import NETWORKS
 
@@ -46,6 +46,19 @@ def test_islanding_contingencies_are_those_that_add_an_island(
         assert split == (count(ends, after) > count(ends, on))
 
 
+@given(graphs())
+@settings(max_examples=300)
+def test_contingencies_during_outages(case: tuple[BranchEnds, np.ndarray, list[np.ndarray]]) -> None:
+    # The labels of the whole network tell also what splits it while other branches are out.
+    ends, on, outages = case
+    contingencies = Contingencies(
+        names=tuple(map(str, range(len(outages)))), branches=tuple(outages), monitored=np.ones(on.size, dtype=bool)
+    )
+    everything = np.ones(on.size, dtype=bool)
+    found = splitting(cut_labels(ends, everything), contingencies, np.flatnonzero(~on))
+    np.testing.assert_array_equal(found, islanding_contingencies(ends, on, contingencies))
+
+
 def test_islands_agree_with_those_of_the_network() -> None:
     network = read_scenario(NETWORKS / "case118").network
     on = np.ones(network.n_branch, dtype=bool)
@@ -72,12 +85,6 @@ def test_bridges_of_118_buses() -> None:
         expected.append(network.islands(after).max() > 0)
     assert found.tolist() == expected
     assert 0 < found.sum() < 20
-
-
-def test_dead_buses() -> None:
-    ends = BranchEnds(4, np.array([0, 2]), np.array([1, 3]))
-    source = np.array([True, False, False, False])
-    assert dead_buses(ends, np.array([True, True]), source).tolist() == [False, False, True, True]
 
 
 def test_dead_buses_and_islands_are_warnings(tmp_path: Path) -> None:
