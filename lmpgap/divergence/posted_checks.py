@@ -29,7 +29,7 @@ def revision_findings(posted: PostedPrices, intervals: pd.DatetimeIndex, labels:
             largest = part["node"].iloc[int(part[changes].abs().max(axis=1).to_numpy().argmax())]
             amount = float(part["lmp_change"].abs().max())
             issued = part["published_at"].max()
-            when = "" if pd.isna(issued) else f", published {labels.day(issued)} {_clock(issued, labels)},"
+            when = "" if pd.isna(issued) else f", published {_moment(issued, labels)},"
             nodes = part["node"].nunique()
             yield Finding(
                 interval_start=intervals[first],
@@ -238,5 +238,6 @@ def _energy_findings(
         )
 
 
-def _clock(moment: pd.Timestamp, labels: IntervalLabels) -> str:
-    return f"{moment.tz_convert(labels.time_zone):%H:%M}"
+def _moment(moment: pd.Timestamp, labels: IntervalLabels) -> str:
+    local = moment.tz_convert(labels.time_zone)
+    return f"{local.day} {local:%b %H:%M}"

@@ -22,6 +22,10 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
 _BEAM = 12
 """Sets that are kept of each size; on 118 buses 4 already find all of four random constraints."""
 
+_TWIN = 1e-4
+"""Sine of the angle between a column and the others of its set below which it counts as made of them [-]: a
+coefficient fitted in spite of that would be the rounding times ten thousand."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class SparseFit:
@@ -137,13 +141,13 @@ class _Problem:
     def fit(self, members: tuple[int, ...]) -> _Fit:
         """Return the least-squares fit of one set."""
         a = self.unit[list(members)].T
-        basis, triangle = np.linalg.qr(a) if members else (np.zeros((self.target.size, 0)), np.zeros((0, 0)))
+        basis, triangle = np.linalg.qr(a)
+        # Twins in one set have no coefficients of their own; such a set explains nothing.
+        if np.min(np.abs(np.diag(triangle)), initial=1.0) < _TWIN:
+            return _Fit(members, np.zeros(len(members)), self.target, basis, np.inf, np.inf, True)
         along = basis.T @ self.target
         rest = self.target - basis @ along
-        try:
-            scaled = np.linalg.solve(triangle, along) if members else along
-        except np.linalg.LinAlgError:
-            scaled = np.zeros(len(members))
+        scaled = np.linalg.solve(triangle, along)
         return _Fit(
             members=members,
             coefficient=scaled / self.norm[list(members)],
@@ -159,7 +163,7 @@ class _Problem:
         """Return by how much each further column would reduce the sum of squares, (n_column,)."""
         left = 1.0 - np.sum((self.unit @ fit.basis) ** 2, axis=1)
         gain = (self.unit @ fit.rest) ** 2 / np.maximum(left, 1e-12)
-        blocked = left < 1e-8
+        blocked = left < _TWIN**2
         blocked[list(fit.members)] = True
         usable = np.zeros(left.size, dtype=bool)
         usable[self.usable] = True

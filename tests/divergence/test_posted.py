@@ -84,7 +84,7 @@ def test_the_latest_version_wins_and_the_others_are_kept():
     found = all_findings(pd.concat([rows, second]))
     assert found["kind"].tolist() == ["revised"]
     assert found["amount"].tolist() == pytest.approx([5.0])
-    assert "Mon HE03 to HE04: version 2, published Sun 17:00, replaces version 1 at 3 nodes" in found["sentence"][0]
+    assert "Mon HE03 to HE04: version 2, published 8 Mar 17:00, replaces version 1 at 3 nodes" in found["sentence"][0]
 
 
 def test_an_equal_reissue_is_no_finding():

@@ -1,0 +1,336 @@
+"""Which constraints stand behind the posted congestion, interval by interval, and what no constraint explains."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+
+from lmpgap.divergence.candidates import Candidates
+from lmpgap.divergence.findings import Finding
+from lmpgap.divergence.labels import IntervalLabels, listed, stretches
+from lmpgap.divergence.operating_points import OperatingPoints
+from lmpgap.divergence.price_set import PriceSet, places
+from lmpgap.divergence.recovery import SparseFit, choose_among_alike, sparse_fit
+from lmpgap.scenario.network import FloatArray
+from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
+
+AT_LIMIT = 0.9
+"""Share of the limit from which a constraint counts as loaded when reasons for congestion are sought [-]; the
+operator's dispatch and the operating point here need not agree to the megawatt."""
+
+NOT_CREDIBLE = 0.7
+"""A constraint loaded less than this in either direction cannot have bound [-]."""
+
+RECOVERED_COLUMNS = [
+    "interval_start", "constraint", "kind", "contingency", "monitored", "direction", "shadow_price", "largest_effect",
+    "largest_at", "loading", "flow", "alike", "rest", "explained",
+]  # fmt: skip
+
+
+@dataclass(frozen=True, kw_only=True)
+class Explanation:
+    """What explains the posted congestion of all intervals.
+
+    Attributes
+    ----------
+    recovered : DataFrame
+        One row per interval and constraint: `RECOVERED_COLUMNS`. ``shadow_price`` [$/MWh], ``largest_effect`` on a node
+        (signed, at node ``largest_at``) [$/MWh], ``loading`` of the operating point [-] and ``flow`` [MW or MVA], both
+        negative against the forward direction, ``alike``: constraints that explain as well, ``rest``: largest
+        unexplained congestion of the interval [$/MWh], ``explained``: whether that is within the rounding.
+    rest : (n_interval, n_node)
+        Unexplained congestion [$/MWh]; ``nan`` where it was not looked at.
+    noise : (n_interval,)
+        Rest that is nothing to speak of: rounding, or the general difference between this operating point and the
+        operator's [$/MWh].
+    formulation : (n_interval,) of str
+        Operating point that was used; empty where none was known.
+    """
+
+    recovered: pd.DataFrame
+    rest: FloatArray
+    noise: FloatArray
+    formulation: tuple[str, ...]
+
+
+def explain_congestion(
+    posted: PriceSet,
+    mix: FloatArray,
+    points: Mapping[str, OperatingPoints],
+    tolerances: Tolerances = DEFAULT_TOLERANCES,
+    *,
+    probes: int = 10,
+) -> Explanation:
+    """Return the constraints that explain posted congestion.
+
+    Parameters
+    ----------
+    posted
+        Posted prices of the nodes; intervals as in ``points``.
+    mix : (n_node, n_bus)
+        What each node is made of.
+    points
+        Operating points by formulation. The one whose shift factors explain the hours of largest congestion best is
+        used throughout.
+    probes
+        Hours on which that is tried.
+    """
+    # Congestion is off by its rounding, and the fit spreads what it cannot meet over the other nodes.
+    tolerance = 2.0 * tolerances.posted_rounding
+    n_interval = posted.n_interval
+    rest = np.full(posted.lmp.shape, np.nan)
+    noise = np.full(n_interval, tolerance)
+    used = [""] * n_interval
+    rows: list[tuple[object, ...]] = []
+    chosen = _best_points(posted, mix, points, tolerance, probes)
+    if chosen is None:
+        return Explanation(recovered=_recovered_table(rows), rest=rest, noise=noise, formulation=tuple(used))
+    before: tuple[tuple[str, str, str], ...] = ()
+    for position in range(n_interval):
+        if not chosen.known(position):
+            continue
+        used[position] = chosen.formulation
+        problem = _interval(posted, mix, chosen, position)
+        if problem is None:
+            continue
+        fit = problem.explain(tolerance, before)
+        rest[position, problem.nodes] = fit.rest
+        if not fit.explained:
+            noise[position] = max(tolerance, 6.0 * float(np.median(np.abs(fit.rest))))
+        told = problem.rows(fit, posted)
+        before = tuple((str(row[2]), str(row[3]), str(row[4])) for row in told)
+        rows += told
+    return Explanation(recovered=_recovered_table(rows), rest=rest, noise=noise, formulation=tuple(used))
+
+
+def congestion_findings(explanation: Explanation, posted: PriceSet, labels: IntervalLabels) -> Iterator[Finding]:
+    """Yield reversed constraints, constraints that cannot have bound, and congestion that nothing explains."""
+    recovered = explanation.recovered
+    forward = recovered["direction"].isin(["forward", "upper"]).to_numpy()
+    along = recovered["loading"].to_numpy(float) * np.where(forward, 1.0, -1.0)
+    reversed_rows = along <= -AT_LIMIT
+    doubtful = np.abs(along) < NOT_CREDIBLE
+    for name, rows in recovered[reversed_rows].groupby("constraint", sort=True):
+        yield from _per_stretch(rows, str(name), "reversed-constraint", posted, labels)
+    for name, rows in recovered[doubtful].groupby("constraint", sort=True):
+        yield from _per_stretch(rows, str(name), "unexplained-congestion", posted, labels)
+    yield from _rest_findings(explanation, posted, labels)
+
+
+def _per_stretch(
+    rows: pd.DataFrame, name: str, kind: str, posted: PriceSet, labels: IntervalLabels
+) -> Iterator[Finding]:
+    at = places(posted.intervals, rows["interval_start"])
+    for first, last in stretches(at):
+        part = rows[(at >= first) & (at <= last)]
+        top = part.iloc[int(part["largest_effect"].abs().to_numpy().argmax())]
+        effect, node = float(top["largest_effect"]), str(top["largest_at"])
+        when = labels.stretch(posted.intervals[first], posted.intervals[last])
+        alike = f" (or {top['alike']}, which these prices cannot tell from it)" if top["alike"] else ""
+        price = f"a shadow price of up to {float(part['shadow_price'].max()):,.2f} $/MWh"
+        flows = f"{abs(float(top['flow'])):,.0f} MW or {100.0 * abs(float(top['loading'])):.0f} % of the limit"
+        if kind == "reversed-constraint":
+            ahead = "forward" if float(top["flow"]) >= 0.0 else "in reverse"
+            sentence = (
+                f"{when}: the posted congestion is that of {name}{alike} with {price}, yet the flow runs {ahead} "
+                f"({flows}): the direction seems reversed, {effect:+,.2f} $/MWh at {node}."
+            )
+        else:
+            sentence = (
+                f"{when}: the posted congestion would take the limit {name}{alike} with {price} to explain, yet it "
+                f"carries {flows} at this operating point; {effect:+,.2f} $/MWh at {node}."
+            )
+        yield Finding(
+            interval_start=posted.intervals[first],
+            kind=kind,
+            node=node,
+            constraint=name,
+            amount=effect,
+            unit="$/MWh",
+            sentence=sentence,
+        )
+
+
+def _rest_findings(
+    explanation: Explanation, posted: PriceSet, labels: IntervalLabels, most_nodes: int = 8
+) -> Iterator[Finding]:
+    """Yield what is left at single nodes, or once for the interval where it is left at many."""
+    rest = np.nan_to_num(explanation.rest)
+    standing = np.abs(rest) > explanation.noise[:, None]
+    crowded = standing.sum(axis=1) > most_nodes
+    # A rest everywhere that is small against the congestion is another operating point, not a fault.
+    size = np.nanmax(np.where(np.isfinite(posted.congestion), np.abs(posted.congestion), 0.0), axis=1)
+    diffuse = (np.abs(rest).max(axis=1) > 0.1 * size) & ~standing.any(axis=1)
+    diffuse &= np.abs(rest).max(axis=1) > explanation.noise.min(initial=np.inf)
+    for node in np.flatnonzero((standing & ~crowded[:, None]).any(axis=0)).tolist():
+        for first, last in stretches(np.flatnonzero(standing[:, node] & ~crowded)):
+            part = rest[first : last + 1, node]
+            amount = float(part[np.argmax(np.abs(part))])
+            yield Finding(
+                interval_start=posted.intervals[first],
+                kind="unexplained-congestion",
+                node=str(posted.buses[node]),
+                amount=amount,
+                unit="$/MWh",
+                sentence=(
+                    f"{labels.stretch(posted.intervals[first], posted.intervals[last])}: up to {abs(amount):,.2f} "
+                    f"$/MWh of the congestion posted at {posted.buses[node]} is explained by no constraint."
+                ),
+            )
+    for first, last in stretches(np.flatnonzero(crowded | diffuse)):
+        part = rest[first : last + 1]
+        worst = np.unravel_index(int(np.argmax(np.abs(part))), part.shape)
+        nodes = [str(posted.buses[i]) for i in np.argsort(-np.abs(part).max(axis=0), kind="stable")[:3]]
+        count = int((np.abs(part) > explanation.noise[first : last + 1, None]).any(axis=0).sum()) or posted.n_bus
+        yield Finding(
+            interval_start=posted.intervals[first],
+            kind="unexplained-congestion",
+            amount=float(part[worst]),
+            unit="$/MWh",
+            sentence=(
+                f"{labels.stretch(posted.intervals[first], posted.intervals[last])}: no set of constraints explains "
+                f"the congestion posted at {count} nodes; up to {abs(float(part[worst])):,.2f} $/MWh are left, most at "
+                f"{listed(nodes)}."
+            ),
+        )
+
+
+@dataclass(frozen=True, kw_only=True)
+class _Interval:
+    """The recovery problem of one interval."""
+
+    start: pd.Timestamp
+    nodes: np.ndarray[tuple[int], np.dtype[np.int64]]
+    congestion: FloatArray
+    columns: FloatArray
+    free: FloatArray
+    candidates: Candidates
+
+    def explain(self, tolerance: float, before: tuple[tuple[str, str, str], ...]) -> SparseFit:
+        """Return the explanation by loaded constraints if there is one, else by any."""
+        keys = list(zip(self.candidates.kind, self.candidates.contingency, self.candidates.monitored, strict=True))
+        where = {key: i for i, key in enumerate(keys)}
+        first = tuple(where[key] for key in before if key in where) if len(before) > 0 else ()
+        loaded = np.flatnonzero(np.abs(self.candidates.loading) >= AT_LIMIT)
+        first_loaded = tuple(int(np.searchsorted(loaded, k)) for k in first if k in loaded)
+        if len(first_loaded) != len(first):
+            first_loaded = ()
+        fit = sparse_fit(self.congestion, self.columns[loaded], self.free, tolerance, first=first_loaded)
+        if fit.explained:
+            return _widened(fit, loaded)
+        wide = sparse_fit(self.congestion, self.columns, self.free, tolerance)
+        narrow = float(np.sum(fit.rest**2))
+        if wide.explained or float(np.sum(wide.rest**2)) < 0.25 * narrow:
+            return wide
+        return _widened(fit, loaded)
+
+    def rows(self, fit: SparseFit, posted: PriceSet) -> list[tuple[object, ...]]:
+        """Return the rows of the recovered constraints."""
+        candidates = self.candidates
+        told: list[tuple[object, ...]] = []
+        named, _ = choose_among_alike(fit, candidates.loading)
+        worst = float(np.max(np.abs(fit.rest), initial=0.0))
+        for member, chosen, coefficient, alike in zip(named, fit.chosen, fit.coefficient, fit.alike, strict=True):
+            # What is named instead has the effect of what was fitted, with its own shadow price.
+            effect = coefficient * self.columns[chosen]
+            own = self.columns[member]
+            scaled = coefficient if member == chosen else float(own @ effect / (own @ own))
+            forward = scaled >= 0.0
+            top = int(np.argmax(np.abs(effect - effect.mean())))
+            others = [
+                candidates.name(int(j), float(self.columns[j] @ effect) >= 0.0)
+                for j in sorted({int(chosen), *alike} - {int(member)})
+            ]
+            told.append(
+                (
+                    self.start,
+                    candidates.name(int(member), forward),
+                    candidates.kind[member],
+                    candidates.contingency[member],
+                    candidates.monitored[member],
+                    "forward" if forward else "reverse",
+                    candidates.shadow_price(int(member), scaled),
+                    float(effect[top]),
+                    str(posted.buses[self.nodes[top]]),
+                    float(candidates.loading[member]),
+                    float(candidates.flow_mw[member]),
+                    listed(others) if others else "",
+                    worst,
+                    fit.explained,
+                )
+            )
+        return told
+
+
+def _widened(fit: SparseFit, positions: np.ndarray[tuple[int], np.dtype[np.int64]]) -> SparseFit:
+    """Return a fit on some of the columns in terms of all."""
+    return SparseFit(
+        chosen=positions[fit.chosen],
+        coefficient=fit.coefficient,
+        free=fit.free,
+        rest=fit.rest,
+        explained=fit.explained,
+        alike=tuple(tuple(int(positions[j]) for j in group) for group in fit.alike),
+    )
+
+
+def _interval(posted: PriceSet, mix: FloatArray, points: OperatingPoints, position: int) -> _Interval | None:
+    candidates, factor = points.candidates(position)
+    congestion = posted.congestion[position]
+    node_factor = mix @ np.nan_to_num(factor)
+    nodes = np.flatnonzero(np.isfinite(congestion) & np.isfinite(node_factor) & (node_factor != 0.0))
+    if nodes.size < 3 or candidates.n_candidate == 0:
+        return None
+    part = mix[nodes]
+    # Congestion is quoted against the reference; taking out the factors' share at the first node changes nothing that
+    # the free column does not give back, and keeps effects readable: those on the node of least effect are small.
+    columns = candidates.column @ part.T
+    columns = columns - np.outer(
+        columns @ node_factor[nodes] / (node_factor[nodes] @ node_factor[nodes]), node_factor[nodes]
+    )
+    return _Interval(
+        start=posted.intervals[position],
+        nodes=nodes,
+        congestion=congestion[nodes],
+        columns=columns,
+        free=node_factor[nodes][None, :],
+        candidates=candidates,
+    )
+
+
+def _best_points(
+    posted: PriceSet, mix: FloatArray, points: Mapping[str, OperatingPoints], tolerance: float, probes: int
+) -> OperatingPoints | None:
+    """Return the operating points that leave the least congestion unexplained in the most congested intervals."""
+    if len(points) <= 1:
+        return next(iter(points.values()), None)
+    size = np.nanmax(np.where(np.isfinite(posted.congestion), np.abs(posted.congestion), 0.0), axis=1)
+    tried = [
+        position
+        for position in np.argsort(-size, kind="stable").tolist()
+        if size[position] > tolerance and all(each.known(position) for each in points.values())
+    ][:probes]
+    if not tried:
+        return next(iter(points.values()))
+
+    def left(each: OperatingPoints) -> float:
+        total = 0.0
+        for position in tried:
+            problem = _interval(posted, mix, each, position)
+            if problem is not None:
+                total += float(np.median(np.abs(problem.explain(tolerance, ()).rest)))
+        return total
+
+    return min(points.values(), key=left)
+
+
+def _recovered_table(rows: list[tuple[object, ...]]) -> pd.DataFrame:
+    table = pd.DataFrame(rows, columns=RECOVERED_COLUMNS)
+    text = ["constraint", "kind", "contingency", "monitored", "direction", "largest_at", "alike"]
+    number = ["shadow_price", "largest_effect", "loading", "flow", "rest"]
+    table = table.astype({**dict.fromkeys(text, "str"), **dict.fromkeys(number, "float64"), "explained": "bool"})
+    table["interval_start"] = pd.to_datetime(table["interval_start"], utc=True).astype("datetime64[us, UTC]")
+    return table
