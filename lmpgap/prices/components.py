@@ -33,12 +33,12 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import sparse
-from scipy.sparse.linalg import SuperLU, splu
 
 from lmpgap.dispatch.result import DispatchResult
-from lmpgap.errors import NotIdentifiableError, NumericalError
+from lmpgap.errors import NotIdentifiableError
 from lmpgap.prices.keys import ConstraintKey, KeyedConstraints, merge_by_key
 from lmpgap.prices.reference import island_weights
+from lmpgap.prices.turning import Turning
 from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, Network
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
@@ -151,6 +151,8 @@ def split_prices(
     tolerances: Tolerances = DEFAULT_TOLERANCES,
     *,
     reactive_sources: int | None = 0,
+    island: IntArray | None = None,
+    keyed: KeyedConstraints | None = None,
 ) -> PriceSplit:
     """Split the nodal prices of a solve on a reference.
 
@@ -167,6 +169,10 @@ def split_prices(
         Shadow prices up to ``shadow_price`` are left out of the constraints (and show in the residual).
     reactive_sources
         How many sources of the reactive component to list by bus: 0 for none, ``None`` for all.
+    island : (n_bus,), optional
+        Island numbers, where the caller has them already.
+    keyed : optional
+        The result's constraints (`constraints_of`), where the caller has them already.
 
     Returns
     -------
@@ -180,11 +186,11 @@ def split_prices(
     NumericalError
         When the operating point leaves an island's angles undetermined.
     """
-    island = network.islands(branch_in_service)
+    island = network.islands(branch_in_service) if island is None else island
     live = np.isfinite(result.multipliers.active)
     multiplier_price = multiplier_to_price(result.multipliers.active, network.base_mva)
     reactive_price = multiplier_to_price(result.multipliers.reactive, network.base_mva)
-    keyed = merge_by_key(result.constraints)
+    keyed = merge_by_key(result.constraints) if keyed is None else keyed
     # Voltage and reactive limits do not turn with the angles: they act through the reactive prices.
     turns = np.diff(keyed.angle_gain.indptr) > 0
     keep = np.flatnonzero(turns & (keyed.shadow_price > tolerances.shadow_price))
@@ -192,11 +198,11 @@ def split_prices(
     if not live.any():
         return _nothing(network, island, reference, multiplier_price, reactive_price)
 
-    turning = _Turning.of(network, result, island, live)
+    turning = Turning.of(network, result, island, live)
     # Shift factors per unit of the constraint and per MW: gain [unit/rad], injection [pu] of base_mva [MW].
-    shift_factor = turning.solve((keyed.angle_gain[keep] @ turning.difference).toarray().T) / network.base_mva
-    reactive_source = turning.reactive.T.multiply(np.where(live, reactive_price, 0.0)).tocsc()
-    reactive = -turning.solve(np.asarray(reactive_source.sum(axis=1)).reshape(-1, 1))[:, 0]
+    shift_factor = turning.solve(turning.at_buses(keyed.angle_gain[keep])) / network.base_mva
+    reactive_source = turning.reactive_source(np.where(live, reactive_price, 0.0))
+    reactive = -turning.solve(np.asarray(reactive_source @ np.ones(network.n_bus))[:, None])[:, 0]
 
     delivery_factor = turning.null_vector() if result.frozen is None else result.frozen.delivery_factor
     reducer = _Reducer(reference, island, delivery_factor)
@@ -249,56 +255,6 @@ def constraints_of(result: DispatchResult) -> KeyedConstraints:
     return merge_by_key(result.constraints)
 
 
-@dataclass(frozen=True, kw_only=True)
-class _Turning:
-    """Jacobians of the injections for a turn of the bus angles, and the factorised system."""
-
-    difference: sparse.csr_array
-    reactive: sparse.csr_array
-    factor: SuperLU
-    pinned: BoolArray
-    live: BoolArray
-
-    @staticmethod
-    def of(network: Network, result: DispatchResult, island: IntArray, live: BoolArray) -> _Turning:
-        point = result.point
-        ends_from, ends_to = network.from_incidence(), network.to_incidence()
-        difference = sparse.csr_array(ends_from - ends_to)
-        active = sparse.csr_array(
-            (ends_from.multiply(point.dp_from[:, None]) + ends_to.multiply(point.dp_to[:, None])).T @ difference
-        )
-        reactive = sparse.csr_array(
-            (ends_from.multiply(point.dq_from[:, None]) + ends_to.multiply(point.dq_to[:, None])).T @ difference
-        )
-        # One bus per island, the one with the stiffest connection, takes the place of the redundant equation.
-        stiffness = np.where(live, np.abs(active.diagonal()), -1.0)
-        order = np.lexsort((-stiffness, island))
-        _, first = np.unique(island[order], return_index=True)
-        pinned = np.zeros(network.n_bus, dtype=bool)
-        pinned[order[first]] = True
-        fixed = (pinned | ~live).astype(float)
-        system = sparse.csc_array(active.T.multiply((1.0 - fixed)[:, None]) + sparse.diags_array(fixed))
-        try:
-            factor = splu(system)
-        except RuntimeError as error:
-            raise NumericalError(
-                f"{result.formulation}: the flows do not determine the angles of an island (a branch in service "
-                "whose flow does not turn with its angle), so prices cannot be split; check branch reactances"
-            ) from error
-        return _Turning(difference=difference, reactive=reactive, factor=factor, pinned=pinned, live=live)
-
-    def solve(self, right_side: FloatArray) -> FloatArray:
-        """Return the columns X of P_theta' X = right side that vanish at the pinned buses, (n_bus, n_column)."""
-        if right_side.shape[1] == 0:
-            return np.zeros(right_side.shape)
-        free = (~self.pinned & self.live)[:, None]
-        return np.asarray(self.factor.solve(np.ascontiguousarray(right_side * free)))
-
-    def null_vector(self) -> FloatArray:
-        """Return the vector of P_theta' DF = 0 that is one at the pinned buses, (n_bus,)."""
-        return np.asarray(self.factor.solve(self.pinned.astype(float)))
-
-
 class _Reducer:
     """Moves columns from one reference to the weights, island by island; (n_bus,) or (n_bus, n_column)."""
 
@@ -325,7 +281,7 @@ class _Reducer:
 
 
 def _sources(
-    turning: _Turning,
+    turning: Turning,
     reducer: _Reducer,
     reactive_source: sparse.csc_array,
     reactive: FloatArray,

@@ -194,6 +194,8 @@ def rereference(
 def _island_sum(values: FloatArray, island: IntArray) -> FloatArray:
     """Return the sum over each bus's island, in the shape of the values (..., n_bus)."""
     n_bus = values.shape[-1]
+    if values.ndim == 1:
+        return np.asarray(np.bincount(island, values)[island], dtype=float)
     member = sparse.csr_array((np.ones(n_bus), (np.arange(n_bus), island)))
     flat = values.reshape(-1, n_bus)
     return np.asarray((flat @ member)[:, island]).reshape(values.shape)
