@@ -4,18 +4,19 @@ from __future__ import annotations
 
 from collections import OrderedDict
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pyarrow as pa
 from threadpoolctl import threadpool_limits
 
 from lmpgap.dispatch.ac_check import ac_check
+from lmpgap.dispatch.diagnosis import diagnose
 from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
 from lmpgap.dispatch.frozen import DeliveryFactorDispatch, FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits, interface_limits
 from lmpgap.dispatch.outage_factors import OutageFactors
-from lmpgap.dispatch.result import DispatchResult
+from lmpgap.dispatch.result import DispatchResult, SolveStatus
 from lmpgap.dispatch.security import solve_secure
 from lmpgap.prices.certificate import certify
 from lmpgap.prices.components import PriceSplit, split_prices
@@ -103,8 +104,13 @@ def _solve(
     given = planned.given if name == "dc-loss" else None
     formulation = space.formulation(name) if given is None else _with_given_losses(space, given, planned.weights)
     if space.outages is None:
-        return formulation.solve(inputs, limits, start), limits
-    return solve_secure(formulation, inputs, limits, space.outages, space.options.tolerances, start)
+        result = formulation.solve(inputs, limits, start)
+    else:
+        result, limits = solve_secure(formulation, inputs, limits, space.outages, space.options.tolerances, start)
+    if result.status is SolveStatus.INFEASIBLE:
+        found = diagnose(name, space.network, inputs, limits, space.options)
+        result = replace(result, message=f"{result.message}: {found.sentence}")
+    return result, limits
 
 
 def _with_given_losses(space: Workspace, given: GivenLosses, weights: FloatArray) -> Formulation:

@@ -154,6 +154,7 @@ def test_an_infeasible_hour_does_not_stop_the_others(scenario: Path, tmp_path: P
     bad = solves[solves["verdict"] == "uncertified"]
     assert set(bad["status"]) == {"infeasible"}
     assert bad["interval_start"].nunique() == 1
+    assert bad["reasons"].str.contains("smallest change that makes it feasible: .* of load at B").all()
     assert len(folder.table("prices")) == 5 * 2 * 14
 
 
