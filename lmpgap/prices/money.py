@@ -174,8 +174,8 @@ def money_balance(
         # $/MWh times pu of base_mva
         return float(hours * base * np.sum((price * power)[live]))
 
-    generation = np.bincount(network.resource_bus, weights=result.p, minlength=network.n_bus)
-    bids = np.bincount(inputs.bids.bus, weights=result.bid_served, minlength=network.n_bus)
+    generation = np.asarray(np.bincount(network.resource_bus, weights=result.p, minlength=network.n_bus), dtype=float)
+    bids = np.asarray(np.bincount(inputs.bids.bus, weights=result.bid_served, minlength=network.n_bus), dtype=float)
     load = inputs.load_p - result.unserved + result.surplus + bids
     injection = generation - load
     return MoneyBalance(

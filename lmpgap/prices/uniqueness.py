@@ -10,9 +10,10 @@ and the price at a bus may be anything between the smallest and the largest entr
 on prices and not on multipliers as a whole: two identical parallel branches at their limit have shadow prices that
 are not unique and prices that are.
 
-Every admissible z is the solver's z plus a combination of directions N with J' N = 0. The screen finds these
-directions; without one that moves a price nothing remains to be done. Otherwise two linear programs per direction in
-which prices move, in as few variables as there are directions, give the interval.
+Every admissible z is the solver's z plus a combination of directions N with J' N = 0, or nearly so at a solution that
+is one only nearly. The screen finds these directions; without one that moves a price nothing remains to be done.
+Otherwise two linear programs per direction in which prices move, in as few variables as there are directions, give
+the interval.
 
 Notes
 -----
@@ -38,6 +39,10 @@ from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 _NO_PART = 1e-6
 """A row whose entry in the directions is smaller than this, relative to the largest, has no part in them: what stands
 there is the error of a gradient at an approximate solution."""
+
+
+_ROUNDING = 1e-10
+"""Directions are of length one in normalised rows; what they leave of the gradients below this is rounding."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -100,13 +105,23 @@ def price_intervals(
     size = np.linalg.norm(directions, axis=1)
     has_part = size > _NO_PART * np.max(size, initial=0.0)
     moving = np.flatnonzero(live & has_part[rows])
+    left_open = np.abs(reduced.gradient + reduced.jacobian.T @ z)
+    residual = np.max(left_open, initial=0.0) / base_mva
     if moving.size:
         limits = np.flatnonzero(has_part & ~reduced.free)
-        down, up = _reach(directions[rows[moving]], directions[limits], z[limits])
+        # A direction that only nearly vanishes breaks stationarity when it is followed far: for each variable it may
+        # do so by the floor, or by ten times what the solution itself leaves open.
+        drift = reduced.jacobian.T @ directions
+        drifts = np.flatnonzero(np.linalg.norm(drift, axis=1) > _ROUNDING)
+        allowed = np.maximum(base_mva * tolerances.stationarity_floor, 10.0 * left_open[drifts])
+        down, up = _reach(
+            directions[rows[moving]],
+            np.vstack([directions[limits], drift[drifts], -drift[drifts]]),
+            np.concatenate([z[limits], allowed, allowed]),
+        )
         low[moving] += multiplier_to_price(down, base_mva)
         high[moving] += multiplier_to_price(up, base_mva)
     # Below this width an interval says no more than the solver's own accuracy.
-    residual = np.max(np.abs(reduced.gradient + reduced.jacobian.T @ z), initial=0.0) / base_mva
     wide = high - low > max(tolerances.interval_width, 1000.0 * residual)
     return PriceIntervals(
         low=np.where(wide, low, price),
