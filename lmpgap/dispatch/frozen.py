@@ -150,7 +150,8 @@ def resolve_open_slack(
             proximal *= 4.0
         base, error = result, abs(result.fictitious_loss)
     if best is None:
-        return replace(result, loss_slack_open=True, solver_seconds=seconds)
+        message = f"feasible only by burning {burnt:.4g} MW that no flow causes; without it: {result.message}"
+        return replace(result, message=message, loss_slack_open=True, solver_seconds=seconds)
     note = (
         f"the relaxed losses held {burnt:.4g} MW that no flow causes; solved again with losses frozen around its own "
         f"flows ({passes} pass{'es' if passes > 1 else ''}"

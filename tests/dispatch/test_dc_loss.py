@@ -167,6 +167,15 @@ def test_negative_prices_open_the_slack_and_are_solved_again() -> None:
     assert prices(network, result) == pytest.approx([-20.0, -20 * (1 + k * flow) / (1 - k * flow)], abs=2e-3)
 
 
+def test_must_run_that_only_fictitious_losses_could_absorb_is_infeasible() -> None:
+    # 320 MW must run against 300 MW of load; the flow can lose 9.3 MW, the relaxation anything.
+    network, inputs = grid([("1", "2", 0.01, 0.1, FREE)], [("1", 320.0, 10.0), ("2", 0.0, 0.0)], {"2": 300.0})
+    forced = replace(inputs, p_min=np.array([3.2, 0.0]), segments=replace(inputs.segments, width=np.zeros(2)))
+    result = solve("dc-loss", network, forced)
+    assert result.status is SolveStatus.INFEASIBLE
+    assert result.message.startswith("feasible only by burning ")
+
+
 def test_positive_prices_keep_the_slack_closed() -> None:
     network, inputs = load_network("case30")
     result = solve("dc-loss", network, inputs)
