@@ -55,6 +55,7 @@ class World:
     settings: ScenarioSettings
     tables: dict[str, pd.DataFrame]
     branch_in_service: np.ndarray | None = None
+    hashes: dict[str, str] = field(default_factory=dict)
     network: Network = field(init=False)
 
     def __post_init__(self) -> None:
