@@ -54,7 +54,12 @@ class SyntheticScenario:
     tables: Mapping[str, pd.DataFrame]
     interval_starts: pd.DatetimeIndex
     hashes: Mapping[str, str]
+    weights: np.ndarray
     warnings: tuple[Any, ...] = field(default=())
+
+    def reference_weights(self, position: int) -> np.ndarray:
+        """Return the load-weighted reference, the same in every interval."""
+        return self.weights
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -136,6 +141,7 @@ def synthetic_run(
             "posted": week.posted() if posted else pd.DataFrame(),
         },
         interval_starts=starts,
+        weights=grid.load_share,
         hashes={"buses.csv": "a" * 64, "scenario.toml": "0123456789abcdef" * 4},
     )
     manifest = {"lmpgap": "0.1.0", "formulations": list(FORMULATIONS), "tolerances": {"price_residual": 1e-3}}
@@ -500,7 +506,7 @@ class _Week:
             congestion_component=parts["congestion"],
             loss_component=parts["loss"],
         )
-        return frame.rename(columns={"bus": "node"}).assign(version="1", published_at=pd.NaT)
+        return frame.rename(columns={"bus": "node"}).assign(version=1.0, published_at=pd.NaT)
 
     def findings(self) -> pd.DataFrame:
         buses = self.grid.buses["bus"]

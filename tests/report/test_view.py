@@ -11,7 +11,7 @@ import pytest
 from lmpgap.errors import DataError
 from lmpgap.report.text import number
 from lmpgap.report.view import WeeklyView, build_view
-from lmpgap.report.view.cube import COMPONENTS, latest_posted
+from lmpgap.report.view.cube import COMPONENTS
 from lmpgap.report.view.drivers import driver_blocks
 from lmpgap.report.view.hours import REPEATED_MARK, make_hours
 from lmpgap.report.view.layout import automatic_layout
@@ -194,17 +194,37 @@ def test_hours_that_were_not_priced_stay_on_the_axis(run: SyntheticRun) -> None:
 # --- parts --------------------------------------------------------------------------------------------------------
 
 
-def test_the_latest_posted_version_wins() -> None:
-    frame = pd.DataFrame(
+def test_the_latest_posted_version_wins(run: SyntheticRun) -> None:
+    posted = run.scenario.tables["posted"]
+    newer = posted.assign(lmp=posted["lmp"] + 5.0, energy_component=posted["energy_component"] + 5.0, version=2.0)
+    scenario = replace(run.scenario, tables={**run.scenario.tables, "posted": pd.concat([newer, posted])})
+    old = build_view(run.tables, run.scenario, {}, ["One sentence."]).cube.get("posted")
+    np.testing.assert_allclose(build_view(run.tables, scenario, {}, ["S."]).cube.get("posted"), old + 5.0, atol=1e-4)
+
+
+def test_posted_components_are_brought_to_the_reference_of_the_run(run: SyntheticRun) -> None:
+    """Moved to another reference, the AC prices must come back as they were (identity of re-referencing)."""
+    prices = run.tables["prices"].query("formulation == 'ac'")
+    at = prices.set_index(["interval_start", "bus"])
+    first = at.xs(run.scenario.tables["buses"]["bus"].iloc[3], level="bus").reindex(prices["interval_start"])
+    energy = prices["energy_component"].to_numpy()
+    factor = (energy + prices["loss_component"].to_numpy()) / (energy + first["loss_component"].to_numpy())
+    posted = pd.DataFrame(
         {
-            "interval_start": pd.to_datetime(["2026-01-01T00:00Z"] * 3),
-            "node": ["A"] * 3,
-            "lmp": [1.0, 2.0, 3.0],
-            "version": ["1", "2", "1b"],
-            "published_at": pd.to_datetime(["2026-01-02T00:00Z", "2026-01-04T00:00Z", "2026-01-03T00:00Z"]),
+            "interval_start": prices["interval_start"],
+            "node": prices["bus"].astype(str),
+            "lmp": prices["lmp"],
+            "energy_component": first["lmp"].to_numpy(),
+            "loss_component": first["lmp"].to_numpy() * (factor - 1.0),
         }
     )
-    assert latest_posted(frame)["lmp"].tolist() == [2.0]
+    posted["congestion_component"] = posted["lmp"] - posted["energy_component"] - posted["loss_component"]
+    scenario = replace(run.scenario, tables={**run.scenario.tables, "posted": posted})
+    cube = build_view(run.tables, scenario, {}, ["One sentence."]).cube
+    # no reactive part is posted, so the energy component differs by its weighted mean; the factors do not
+    ours = (cube.get("ac", "energy") + cube.get("ac", "loss")) / cube.get("ac", "energy")
+    theirs = (cube.get("posted", "energy") + cube.get("posted", "loss")) / cube.get("posted", "energy")
+    np.testing.assert_allclose(theirs, ours, atol=2e-5)
 
 
 def test_a_large_region_keeps_the_drivers_of_its_largest_differences(run: SyntheticRun, view: WeeklyView) -> None:

@@ -24,8 +24,7 @@ def duration_values(view: WeeklyView, pair: PairView) -> FloatArray:
 def duration_pairs(view: WeeklyView) -> tuple[PairView, ...]:
     """Return the pairs worth a curve: every price set against AC; without AC, the ladder."""
     against_ac = [pair for pair in view.pairs if pair.against == "ac" and pair.base != "ac"]
-    posted = [pair for pair in view.pairs if (pair.base, pair.against) == ("ac", "posted")]
-    return tuple(against_ac + posted) or view.ladder or (view.main,)
+    return tuple(against_ac) or view.ladder or (view.main,)
 
 
 def duration_curve(view: WeeklyView) -> go.Figure:
@@ -33,14 +32,13 @@ def duration_curve(view: WeeklyView) -> go.Figure:
     figure = picture(330, top=40)
     share = np.linspace(0.0, 100.0, _STEPS)
     for pair in duration_pairs(view):
-        name = pair.against if pair.against == "posted" else pair.base
         figure.add_trace(
             go.Scatter(
                 x=floats(share),
                 y=floats(duration_values(view, pair)),
                 mode="lines",
                 name=f"{pair.against} less {pair.base}",
-                line={"color": colour(name), "dash": DASH.get(name, "solid"), "width": 2.2},
+                line={"color": colour(pair.base), "dash": DASH.get(pair.base, "solid"), "width": 2.2},
                 hovertemplate="%{y:.2f} or more in %{x:.0f} % of bus-hours",
             )
         )

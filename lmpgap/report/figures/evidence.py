@@ -44,7 +44,7 @@ def account_stakes(view: WeeklyView) -> go.Figure:
         )
     )
     figure.update_xaxes(
-        title_text=f"posted less recomputed, {view.currency} over the week",
+        title_text=view.currency,
         zeroline=True,
         zerolinecolor=LIGHT["ink"],
         showgrid=True,

@@ -58,6 +58,8 @@ def waterfall(view: WeeklyView, bus: int, hour: int) -> go.Figure:
             marker={"color": [LIGHT["above_2"] if step >= 0 else LIGHT["below_2"] for step in steps]},
             text=[number(step, signed=True) for step in steps],
             textposition="outside",
+            textfont={"size": 12},
+            constraintext="none",
             cliponaxis=False,
             width=0.56,
             hoverinfo="skip",
@@ -169,7 +171,7 @@ def hub_components(view: WeeklyView) -> go.Figure:
     figure.update_layout(barmode="relative", bargap=0.3)
     figure.update_yaxes(autorange="reversed", showgrid=False, ticks="", dividercolor=LIGHT["rule"])
     figure.update_xaxes(
-        title_text=f"{view.currency}/MWh beside the energy component",
+        title_text=f"{view.currency}/MWh",
         showgrid=True,
         zeroline=True,
         zerolinecolor=LIGHT["soft"],

@@ -139,18 +139,37 @@ function showReadout() {
 }
 
 const DRIVER_WORDS = {
-  "energy price": () => "the energy price",
-  "delivery factor": () => "delivery factors",
-  reactive: () => "reactive power and voltages",
-  congestion: (row) => (row.constraint ? `congestion on ${row.constraint}` : "congestion"),
-  "shadow price": (row) => `the shadow price of ${row.constraint}`,
-  "shift factor": (row) => `shift factors on ${row.constraint}`,
-  unsplit: () => "what its components do not explain",
+  "energy price": () => "from the energy price",
+  "delivery factor": () => "from losses",
+  reactive: () => "from reactive power and voltage",
+  congestion: (row) => (row.constraint ? `from the limit ${row.constraint}` : "from congestion"),
+  unsplit: () => "outside the price components",
 };
 
-function driverWords(row) {
-  if (row.onlyIn) return `${row.constraint}, which binds only in ${row.onlyIn}`;
-  return DRIVER_WORDS[row.kind]?.(row) ?? (row.constraint ? `${row.kind}, ${row.constraint}` : row.kind);
+// Both parts of one constraint are one cause; largest first.
+function causes(rows) {
+  const merged = new Map();
+  for (const row of rows) {
+    const limit = row.kind === "shadow price" || row.kind === "shift factor";
+    const key = `${limit ? "limit" : row.kind}|${row.kind === "reactive" ? "" : row.constraint}`;
+    const cause = merged.get(key) ?? { row, limit, amount: 0, price: 0, factor: 0 };
+    cause.amount += row.amount;
+    if (row.kind === "shadow price") cause.price += row.amount;
+    if (row.kind === "shift factor") cause.factor += row.amount;
+    merged.set(key, cause);
+  }
+  return [...merged.values()].sort((a, b) => Math.abs(b.amount) - Math.abs(a.amount));
+}
+
+function causeWords({ row, limit, price, factor }) {
+  if (limit) {
+    const name = `from the limit ${row.constraint}`;
+    if (Math.abs(price) > 3 * Math.abs(factor)) return `${name}, whose shadow price differs`;
+    if (Math.abs(factor) > 3 * Math.abs(price)) return `${name}, on which this bus weighs differently`;
+    return `${name}, whose shadow price and shift factor differ`;
+  }
+  if (row.onlyIn) return `from the limit ${row.constraint}, which binds only in ${row.onlyIn}`;
+  return DRIVER_WORDS[row.kind]?.(row) ?? `from ${row.kind}${row.constraint ? ` on ${row.constraint}` : ""}`;
 }
 
 // Why the two prices differ here, in words; the drivers of a bus and hour add up to its difference.
@@ -174,14 +193,16 @@ function showDrivers() {
     sentence.textContent = `${place}, ${choice.base} and ${choice.against} agree to the cent.`;
   } else {
     const side = difference > 0 ? "below" : "above";
-    let text = `${place}, ${choice.base} is ${figure(Math.abs(difference))} ${side} ${choice.against}`;
+    let text = `${place}, ${choice.base} is ${figure(Math.abs(difference))} ${page.currency}/MWh ${side} ${choice.against}`;
     const rows = driversAt(choice.bus, choice.hour);
     if (rows && rows.length) {
+      // whole cents, so that the figures shown add up to the difference shown
       const sign = Math.sign(difference);
-      const listed = rows.filter((row) => Math.abs(row.amount) >= 0.005).slice(0, 4);
-      const rest = difference - listed.reduce((total, row) => total + row.amount, 0);
-      const parts = listed.map((row) => `${figure(Math.abs(row.amount))} ${Math.sign(row.amount) === sign ? "" : "the other way "}from ${driverWords(row)}`);
-      if (Math.abs(rest) >= 0.005) parts.push(`${figure(Math.abs(rest))} ${Math.sign(rest) === sign ? "" : "the other way "}from the rest`);
+      const cents = Math.round(100 * Math.abs(difference));
+      const named = causes(rows).slice(0, 3).map((cause) => ({ cents: Math.round(sign * 100 * cause.amount), words: causeWords(cause) })).filter((part) => part.cents !== 0);
+      const rest = cents - named.reduce((total, part) => total + part.cents, 0);
+      if (rest !== 0) named.push({ cents: rest, words: "from the rest" });
+      const parts = named.map((part) => `${part.cents > 0 ? "" : "less "}${figure(Math.abs(part.cents) / 100)} ${part.words}`);
       text += `: ${parts.join("; ")}.`;
     } else {
       const parts = PARTS.map((part) => ({ part, step: (prices(choice.against, part)[cell] || 0) - (prices(choice.base, part)[cell] || 0) }))

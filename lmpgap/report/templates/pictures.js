@@ -38,7 +38,7 @@ function orderRows() {
 }
 
 const fill = {
-  map(spec) {
+  map(spec, plot) {
     const values = shown();
     const range = colourRange();
     const marker = spec.data[1].marker;
@@ -55,6 +55,10 @@ const fill = {
     spec.data[1].customdata = here.map((value, bus) => [plotText(name[bus]), plotText(zone[bus]), figure(value, Boolean(choice.base))]);
     spec.data[2].x = [decode(page.buses.x)[choice.bus]];
     spec.data[2].y = [decode(page.buses.y)[choice.bus]];
+    const frame = mapFrame(spec, plot);
+    spec.layout.height = frame.height;
+    if (few) spec.data[1].text = mapLabels(frame, here);
+    Object.assign(marker.colorbar, { len: frame.width < 560 ? 0.94 : 0.5, nticks: 5, tickangle: 0 });
     return `${pairLabel()}${partLabel()}, ${page.hours.label[choice.hour]}`;
   },
 
@@ -237,6 +241,46 @@ const fill = {
   },
 };
 
+// Height and scale of the map: as high as its shape asks for, within reason.
+function mapFrame(spec, plot) {
+  const xs = decode(page.buses.x);
+  const ys = decode(page.buses.y);
+  const span = (values) => {
+    let low = Infinity;
+    let high = -Infinity;
+    for (const value of values) {
+      if (value < low) low = value;
+      if (value > high) high = value;
+    }
+    return [low, Math.max(high - low, 1e-9)];
+  };
+  const [left, wide] = span(xs);
+  const [bottom, tall] = span(ys);
+  const width = plot.width();
+  const bound = spec.layout.yaxis.scaleanchor;
+  const inner = width - 60;
+  const height = Math.round(Math.min(Math.max(bound ? (inner * tall) / wide + 110 : 560, 320), width < 560 ? 440 : 620));
+  const scaleX = bound ? Math.min(inner / wide, (height - 110) / tall) : inner / wide;
+  const scaleY = bound ? scaleX : (height - 110) / tall;
+  return { width, height, x: (bus) => (xs[bus] - left) * scaleX, y: (bus) => (bottom - ys[bus]) * scaleY };
+}
+
+// Names beside the marks; where two would overlap, the bus with the larger figure keeps its name.
+function mapLabels(frame, here) {
+  const order = here.map((_, bus) => bus).sort((a, b) => (b === choice.bus) - (a === choice.bus) || Math.abs(here[b] || 0) - Math.abs(here[a] || 0));
+  const taken = here.map((_, bus) => ({ left: frame.x(bus) - 7, right: frame.x(bus) + 7, top: frame.y(bus) - 7, bottom: frame.y(bus) + 7, bus }));
+  const texts = here.map(() => "");
+  for (const bus of order) {
+    const text = shorten(page.buses.name[bus], 18);
+    const half = 3.2 * text.length + 2;
+    const box = { left: frame.x(bus) - half, right: frame.x(bus) + half, top: frame.y(bus) + 6, bottom: frame.y(bus) + 23, bus };
+    if (taken.some((other) => other.bus !== bus && other.left < box.right && other.right > box.left && other.top < box.bottom && other.bottom > box.top)) continue;
+    taken.push(box);
+    texts[bus] = plotText(text, 18);
+  }
+  return texts;
+}
+
 function moveHourLine(spec) {
   Object.assign(spec.layout.shapes[0], { x0: choice.hour, x1: choice.hour });
 }
@@ -283,9 +327,9 @@ class Plot {
 
   draw() {
     this.stale = false;
-    const subject = fill[this.slot](this.spec);
+    const subject = fill[this.slot](this.spec, this);
     document.querySelector(`[data-subject="${this.slot}"]`).textContent = subject;
-    const layout = themed({ ...this.spec.layout, width: printing ? PRINT_WIDTH : this.element.clientWidth || undefined });
+    const layout = themed({ ...this.spec.layout, width: this.width() });
     if (!printing && window.innerWidth < 640) narrow(layout, this.slot);
     Plotly.react(this.element, themed(this.spec.data), layout, CONFIG);
     if (!this.drawn) {
@@ -296,7 +340,12 @@ class Plot {
         this.element.on("plotly_unhover", hideTip);
       }
     }
+    this.element.style.minHeight = `${layout.height}px`;
     this.element.dataset.ready = "yes";
+  }
+
+  width() {
+    return printing ? PRINT_WIDTH : this.element.clientWidth || 600;
   }
 
   refresh(what) {
@@ -309,9 +358,11 @@ class Plot {
 // On a phone: less margin, legends above in two lines, smaller map.
 function narrow(layout, slot) {
   layout.margin = { ...layout.margin, l: Math.min(layout.margin.l, 64), r: 8 };
-  if (slot === "map") layout.height = Math.min(layout.height, 400);
   if (layout.xaxis?.tickvals && layout.xaxis.ticktext?.[0]?.includes(" ")) {
-    layout.xaxis = { ...layout.xaxis, ticktext: layout.xaxis.ticktext.map((text) => text.split(" ")[0]), ticklabelposition: "outside right" };
+    layout.xaxis = { ...layout.xaxis, ticktext: layout.xaxis.ticktext.map((text) => text.split(" ")[0]), tickfont: { ...layout.xaxis.tickfont, size: 10 } };
+  }
+  if (["binding", "stakes"].includes(slot)) {
+    layout.yaxis = { ...layout.yaxis, ticktext: layout.yaxis.ticktext.map((text) => (text.length > 16 ? `${text.slice(0, 15)}\u2026` : text)), tickfont: { ...layout.yaxis.tickfont, size: 11 } };
   }
 }
 

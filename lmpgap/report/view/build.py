@@ -7,6 +7,7 @@ from typing import Any
 
 import pandas as pd
 
+from lmpgap.divergence.price_set import PriceSet
 from lmpgap.errors import DataError, Fault
 from lmpgap.report.text import number, percent
 from lmpgap.report.view.columns import checked_tables
@@ -27,6 +28,7 @@ from lmpgap.report.view.pairs import (
     when_table,
     where_table,
 )
+from lmpgap.report.view.posted import latest_posted, posted_matrices
 from lmpgap.report.view.prose import CAUTIONS, conventions
 from lmpgap.report.view.stakes import (
     account_totals,
@@ -43,6 +45,7 @@ def build_view(
     scenario: ReportScenario,
     manifest: Mapping[str, Any],
     sentences: Sequence[str],
+    posted: PriceSet | None = None,
 ) -> WeeklyView:
     """Return everything the weekly report shows.
 
@@ -57,6 +60,8 @@ def build_view(
         The run's manifest: versions and settings are shown as they stand there.
     sentences
         What happened this week, in words with figures.
+    posted
+        Posted prices as the checks left them (signs put right); without it the scenario's own table is taken.
 
     Raises
     ------
@@ -76,7 +81,7 @@ def build_view(
         starts.union(pd.DatetimeIndex(scenario.interval_starts)), settings.time_zone, settings.interval_minutes
     )
     nodes = make_nodes(scenario, checked["operating_point"])
-    cube = make_cube(checked["prices"], scenario.tables.get("posted"), nodes, hours)
+    cube = make_cube(checked["prices"], posted_matrices(scenario, posted, nodes, hours), nodes, hours)
     blocks = driver_blocks(checked["drivers"], nodes, hours)
     inside = inside_cells(checked["differences"], nodes, hours)
     views = {
@@ -96,7 +101,7 @@ def build_view(
         nodes=nodes,
         hours=hours,
         cube=cube,
-        hubs=hub_view(cube, make_hubs(scenario, nodes)),
+        hubs=hub_view(cube, make_hubs(scenario, nodes), latest_posted(scenario)),
         pairs=tuple(views.values()),
         main=main,
         ladder=tuple(views[key] for key in ladder_keys(cube)),

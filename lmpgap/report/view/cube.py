@@ -61,31 +61,21 @@ class PriceCube:
         return tuple(name for name in self.sets if name != POSTED)
 
 
-def make_cube(prices: pd.DataFrame, posted: pd.DataFrame | None, nodes: Nodes, hours: Hours) -> PriceCube:
+def make_cube(prices: pd.DataFrame, posted: Mapping[str, Matrix] | None, nodes: Nodes, hours: Hours) -> PriceCube:
     """Return the prices of the run, and the posted ones at buses, as arrays.
 
     Rows of unknown buses or intervals do not belong to this report and are left out.
     """
     columns = {name: "lmp" if name == "lmp" else f"{name}_component" for name in COMPONENTS}
-    values: dict[str, dict[str, Matrix]] = {}
+    values: dict[str, Mapping[str, Matrix]] = {}
     present = prices["formulation"].astype(str)
     order = [name for name in LADDER if (present == name).any()]
     order += sorted(set(present.unique()) - set(order))
     for name in order:
         values[name] = _matrices(prices[present == name], "bus", columns, nodes, hours)
-    if posted is not None and not posted.empty:
-        latest = latest_posted(posted)
-        values[POSTED] = _matrices(latest, "node", columns, nodes, hours)
-        if np.isnan(values[POSTED]["lmp"]).all():
-            del values[POSTED]
+    if posted is not None:
+        values[POSTED] = posted
     return PriceCube(sets=tuple(values), values=values)
-
-
-def latest_posted(posted: pd.DataFrame) -> pd.DataFrame:
-    """Return the version that stands for each interval and node: the one published last."""
-    order = [column for column in ("published_at", "version") if column in posted.columns]
-    ordered = posted.sort_values(order, kind="stable", na_position="first") if order else posted
-    return ordered.drop_duplicates(["interval_start", "node"], keep="last")
 
 
 def _matrices(

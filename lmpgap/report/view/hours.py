@@ -11,7 +11,8 @@ from lmpgap.scenario.network import BoolArray, IntArray
 
 _DAYS = ("Mon", "Tue", "Wed", "Thu", "Fri", "Sat", "Sun")
 _MONTHS = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
-REPEATED_MARK = "\N{ANTICLOCKWISE OPEN CIRCLE ARROW}"
+REPEATED_MARK = "(second)"
+"""Stands after the second of two equal clock hours, as in the sentences."""
 
 
 @dataclass(frozen=True, kw_only=True)

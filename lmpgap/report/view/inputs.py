@@ -7,6 +7,7 @@ from typing import Any, Protocol
 
 import pandas as pd
 
+from lmpgap.scenario.network import FloatArray
 from lmpgap.scenario.settings import ScenarioSettings
 
 
@@ -31,6 +32,10 @@ class ReportScenario(Protocol):
     @property
     def hashes(self) -> Mapping[str, str]:
         """SHA-256 of each input file by its name."""
+        ...
+
+    def reference_weights(self, position: int) -> FloatArray:
+        """Return the weights of the price reference in one interval, (n_bus,), sum 1 [-]."""
         ...
 
     @property

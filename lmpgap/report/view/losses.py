@@ -129,8 +129,11 @@ def _factors(cube: PriceCube, price_set: str) -> FloatArray:
     return np.asarray(np.divide(energy + loss, energy, out=np.full(energy.shape, np.nan), where=safe))
 
 
-def hub_view(cube: PriceCube, hubs: Hubs) -> HubView:
-    """Return the week mean of each component at each hub, over hours that the price set has."""
+def hub_view(cube: PriceCube, hubs: Hubs, posted: pd.DataFrame) -> HubView:
+    """Return the week mean of each component at each hub, over hours that the price set has.
+
+    A hub's posted price comes from its buses where they are posted, else from what was posted for the hub itself.
+    """
     means = {}
     for price_set in cube.sets:
         parts = {}
@@ -143,9 +146,23 @@ def hub_view(cube: PriceCube, hubs: Hubs) -> HubView:
             )
             parts[component] = hubs.weights @ np.where(np.isnan(mean), 0.0, mean)
             missing = (hubs.weights != 0.0) @ np.isnan(mean) > 0
-            parts[component][missing] = np.nan
+            parts[component] = np.where(missing, np.nan, parts[component])
         means[price_set] = parts
+    _add_posted_hubs(means, hubs, posted)
     return HubView(hubs=hubs, means=means)
+
+
+def _add_posted_hubs(means: dict[str, dict[str, FloatArray]], hubs: Hubs, posted: pd.DataFrame) -> None:
+    """Fill the posted means of hubs whose buses are not posted from the hubs' own posted prices, in place."""
+    if POSTED not in means:
+        return
+    for place, hub in enumerate(hubs.name):
+        own = posted[posted["node"].astype(str) == hub]
+        if own.empty or np.isfinite(means[POSTED]["lmp"][place]):
+            continue
+        for component in COMPONENTS:
+            source = "lmp" if component == "lmp" else f"{component}_component"
+            means[POSTED][component][place] = own[source].mean() if source in own.columns else 0.0
 
 
 def sweep_view(sweep: pd.DataFrame, currency: str) -> SweepView | None:

@@ -33,7 +33,7 @@ def pair_keys(cube: PriceCube, differences: pd.DataFrame) -> tuple[PairKey, ...]
         if "ac" in solved:
             pairs += [(name, "ac") for name in solved if name != "ac"]
     if POSTED in cube.sets:
-        pairs += [(name, POSTED) for name in reversed(solved)]
+        pairs += [(POSTED, name) for name in reversed(solved)]
     if not differences.empty:
         compared = differences[["base", "against"]].astype(str).drop_duplicates()
         pairs += [

@@ -36,7 +36,7 @@ def conventions(settings: ScenarioSettings) -> tuple[tuple[str, str], ...]:
     return (
         (
             "Hours",
-            f"Hour ending, {settings.time_zone}; the second of two equal clock hours is marked {REPEATED_MARK}.",
+            f"Hour ending, {settings.time_zone}; the later of two equal clock hours is marked {REPEATED_MARK}.",
         ),
         ("Interval", f"{settings.interval_minutes} minutes."),
         ("Prices", f"{settings.currency}/MWh; a difference is the second-named price less the first-named."),
