@@ -19,14 +19,14 @@ from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import DispatchResult, SolveStatus
 from lmpgap.dispatch.security import solve_secure
 from lmpgap.prices.certificate import certify
-from lmpgap.prices.components import PriceSplit, split_prices
+from lmpgap.prices.components import PriceSplit, constraints_of, split_prices
 from lmpgap.prices.money import money_balance
 from lmpgap.prices.uniqueness import price_intervals
 from lmpgap.runs.fingerprint import fingerprint
 from lmpgap.runs.given_losses import GivenLosses
 from lmpgap.runs.plan import PlannedInterval, RunSettings
 from lmpgap.runs.rows import SolvedInterval, chunk_tables
-from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
 
 _TOPOLOGIES_KEPT = 8
 _workspaces: OrderedDict[str, Workspace] = OrderedDict()
@@ -38,6 +38,7 @@ class Workspace:
 
     network: Network
     branch_in_service: BoolArray
+    island: IntArray
     options: DispatchOptions
     outages: OutageFactors | None
     formulations: dict[str, Formulation]
@@ -58,6 +59,7 @@ def workspace(network: Network, inputs: IntervalInputs, settings: RunSettings, n
     made = Workspace(
         network=network,
         branch_in_service=inputs.branch_in_service,
+        island=network.islands(inputs.branch_in_service),
         options=DispatchOptions(
             dc=settings.dc,
             penalties=settings.penalties,
@@ -136,6 +138,7 @@ def _priced(
     hours: float,
 ) -> SolvedInterval:
     network, inputs, tolerances = space.network, planned.inputs, settings.tolerances
+    keyed = constraints_of(result)
     split: PriceSplit | None = None
     low: FloatArray | None = None
     high: FloatArray | None = None
@@ -148,6 +151,8 @@ def _priced(
             planned.weights,
             tolerances,
             reactive_sources=settings.reactive_sources,
+            island=space.island,
+            keyed=keyed,
         )
         low = high = split.lmp
         if result.stationarity is not None:
@@ -165,6 +170,7 @@ def _priced(
         formulation=name,
         inputs=inputs,
         result=result,
+        constraints=keyed,
         split=split,
         price_low=low,
         price_high=high,

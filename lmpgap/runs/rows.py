@@ -4,14 +4,15 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, fields
-from typing import Any
 
 import numpy as np
 import pyarrow as pa
 
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.prices.certificate import Certificate
-from lmpgap.prices.components import OTHER_SOURCES, PriceSplit, constraints_of
+from lmpgap.prices.components import OTHER_SOURCES, PriceSplit
+from lmpgap.prices.keys import KeyedConstraints
+from lmpgap.runs.assemble import Columns, Labels, assemble
 from lmpgap.runs.schema import RUN_TABLES, SOLVED_TABLES
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 
@@ -24,6 +25,7 @@ class SolvedInterval:
     formulation: str
     inputs: IntervalInputs
     result: DispatchResult
+    constraints: KeyedConstraints
     split: PriceSplit | None
     price_low: FloatArray | None
     price_high: FloatArray | None
@@ -32,37 +34,25 @@ class SolvedInterval:
     power_balance_penalty: float
 
 
-Columns = dict[str, Any]
-
-
 def chunk_tables(network: Network, solved: Sequence[SolvedInterval]) -> dict[str, pa.Table]:
     """Return the tables of a chunk by name, rows in the order of the solves."""
     return {
-        name: pa.concat_tables(
-            [RUN_TABLES[name].to_arrow(_keyed(item, _ROWS[name](network, item))) for item in solved]
-            or [RUN_TABLES[name].arrow_schema.empty_table()]
-        )
+        name: assemble(RUN_TABLES[name], [_keyed(item, _ROWS[name](network, item)) for item in solved])
         for name in SOLVED_TABLES
     }
 
 
 def _keyed(item: SolvedInterval, columns: Columns) -> Columns:
-    length = len(next(iter(columns.values())))
-    return {
-        "interval_start": np.full(length, item.start, dtype="datetime64[us]"),
-        "formulation": np.full(length, item.formulation, dtype=object),
-        **columns,
-    }
+    return {**columns, "interval_start": item.start, "formulation": item.formulation}
 
 
 def _prices(network: Network, item: SolvedInterval) -> Columns:
     split = item.split
     if split is None or item.price_low is None or item.price_high is None:
-        return dict.fromkeys((c.name for c in RUN_TABLES["prices"].columns[2:]), np.zeros(0, dtype=object))
-    live = np.isfinite(split.lmp)
-    names = np.array(network.buses, dtype=object)
+        return _none("prices")
+    live = np.flatnonzero(np.isfinite(split.lmp))
     return {
-        "bus": names[live],
+        "bus": Labels(network.buses, live),
         "lmp": split.lmp[live],
         "energy_component": split.energy[live],
         "congestion_component": split.congestion[live],
@@ -70,12 +60,12 @@ def _prices(network: Network, item: SolvedInterval) -> Columns:
         "reactive_component": split.reactive[live],
         "lmp_low": item.price_low[live],
         "lmp_high": item.price_high[live],
-        "verdict": np.full(int(live.sum()), item.certificate.verdict, dtype=object),
+        "verdict": item.certificate.verdict,
     }
 
 
 def _constraints(network: Network, item: SolvedInterval) -> Columns:
-    keyed = constraints_of(item.result)
+    keyed = item.constraints
     return {
         "constraint": [key.name for key in keyed.keys],
         "kind": [key.kind for key in keyed.keys],
@@ -92,25 +82,21 @@ def _constraints(network: Network, item: SolvedInterval) -> Columns:
 
 def _contributions(network: Network, item: SolvedInterval) -> Columns:
     split = item.split
-    names = np.array(network.buses, dtype=object)
-    buses, constraints, components, amounts = [], [], [], []
-    if split is not None:
-        live = np.flatnonzero(np.isfinite(split.lmp))
-        sources = split.reactive_sources
-        parts = [(key.name, "congestion", row) for key, row in zip(split.keys, split.congestion_by_key, strict=True)]
-        if sources is not None:
-            labels = ["other buses" if s == OTHER_SOURCES else network.buses[s] for s in sources.source]
-            parts += [(label, "reactive", row) for label, row in zip(labels, sources.amount, strict=True)]
-        for label, component, row in parts:
-            buses.append(names[live])
-            constraints.append(np.full(live.size, label, dtype=object))
-            components.append(np.full(live.size, component, dtype=object))
-            amounts.append(row[live])
+    if split is None:
+        return _none("contributions")
+    names, components = [key.name for key in split.keys], ["congestion"] * len(split.keys)
+    amounts, sources = split.congestion_by_key, split.reactive_sources
+    if sources is not None:
+        names += ["other buses" if s == OTHER_SOURCES else network.buses[s] for s in sources.source]
+        components += ["reactive"] * sources.source.size
+        amounts = np.vstack([amounts, sources.amount])
+    live = np.flatnonzero(np.isfinite(split.lmp))
+    part = np.repeat(np.arange(len(names)), live.size)
     return {
-        "bus": _joined(buses, object),
-        "constraint": _joined(constraints, object),
-        "component": _joined(components, object),
-        "amount": _joined(amounts, np.float64),
+        "bus": Labels(network.buses, np.tile(live, len(names))),
+        "constraint": Labels(names, part),
+        "component": Labels(components, part),
+        "amount": amounts[:, live].ravel(),
     }
 
 
@@ -153,7 +139,7 @@ def _operating_point(network: Network, item: SolvedInterval) -> Columns:
     served = inputs.load_p - result.unserved
     np.add.at(served, inputs.bids.bus, result.bid_served)
     return {
-        "bus": list(network.buses),
+        "bus": Labels(network.buses, np.arange(network.n_bus)),
         "v_pu": np.sqrt(result.point.w),
         "angle_deg": np.rad2deg(result.point.angle),
         "load_mw": served * base,
@@ -165,7 +151,7 @@ def _flows(network: Network, item: SolvedInterval) -> Columns:
     if not item.result.status.has_solution:
         return _none("flows")
     return {
-        "branch": list(network.branches),
+        "branch": Labels(network.branches, np.arange(network.n_branch)),
         "mw_at_from": point.p_from * base,
         "mvar_at_from": point.q_from * base,
         "mw_at_to": point.p_to * base,
@@ -191,10 +177,6 @@ def _money(network: Network, item: SolvedInterval) -> Columns:
 
 def _none(table: str) -> Columns:
     return dict.fromkeys((c.name for c in RUN_TABLES[table].columns[2:]), np.zeros(0, dtype=object))
-
-
-def _joined(parts: list[Any], dtype: Any) -> Any:
-    return np.concatenate(parts) if parts else np.zeros(0, dtype=dtype)
 
 
 _DUST = 1e-9

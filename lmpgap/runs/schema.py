@@ -5,11 +5,10 @@ The definitions drive what is written, what an empty table looks like, and the d
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Literal
 
-import numpy as np
 import pandas as pd
 import pyarrow as pa
 
@@ -55,19 +54,6 @@ class RunTable:
     def empty(self) -> pd.DataFrame:
         """Return the table without rows, with the right column types."""
         return pd.DataFrame({column.name: pd.Series(dtype=_PANDAS[column.type]) for column in self.columns})
-
-    def to_arrow(self, columns: Mapping[str, Any]) -> pa.Table:
-        """Return an arrow table from arrays by column name; times are UTC microseconds since 1970."""
-        return pa.table(
-            {column.name: _to_arrow(columns[column.name], column.type) for column in self.columns},
-            schema=self.arrow_schema,
-        )
-
-
-def _to_arrow(values: Any, kind: ColumnType) -> pa.Array:
-    if kind == "time" and isinstance(values, np.ndarray) and values.dtype.kind == "M":
-        return pa.array(values.astype("datetime64[us]").astype(np.int64)).cast(_ARROW[kind])
-    return pa.array(values, type=_ARROW[kind])
 
 
 def _columns(rows: Sequence[tuple[str, ColumnType, str, str]]) -> tuple[RunColumn, ...]:
