@@ -24,11 +24,14 @@ class Movement:
     ----------
     p : (n_resource,)
         Output to stay close to [pu].
+    bid_served : (n_bid,)
+        Served part of each bid to stay close to [pu].
     price : float
-        Cost of each MW of output up or down from it [$/MWh].
+        Cost of each MW up or down from it [$/MWh].
     """
 
     p: FloatArray
+    bid_served: FloatArray
     price: float
 
 
@@ -91,7 +94,8 @@ def interval_vectors(
     parameter[layout.parameters["bid_price"]] = base * inputs.bids.price
     if movement is not None:
         parameter[layout.parameters["movement_price"]] = base * movement.price
-        row_lower[rows["movement"]] = row_upper[rows["movement"]] = movement.p - inputs.p_min
+        target = np.concatenate([movement.p - inputs.p_min, movement.bid_served])
+        row_lower[rows["movement"]] = row_upper[rows["movement"]] = target
     return AcVectors(lower=lower, upper=upper, row_lower=row_lower, row_upper=row_upper, parameter=parameter)
 
 
@@ -108,9 +112,9 @@ def flat_start(program: AcProgram, vectors: AcVectors) -> FloatArray:
     finite = np.isfinite(vectors.lower) & np.isfinite(vectors.upper)
     x[finite] = 0.5 * (vectors.lower[finite] + vectors.upper[finite])
     x[layout.variables["magnitude"]] = 1.0
-    for block in ("unserved", "surplus", "excess", "flow_excess", "up", "down"):
+    for block in ("unserved", "surplus", "excess", "flow_excess"):
         x[layout.variables[block]] = 0.0
-    return np.clip(x, vectors.lower, vectors.upper)
+    return _with_movement(program, vectors, np.clip(x, vectors.lower, vectors.upper))
 
 
 def start_from(program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, result: DispatchResult) -> FloatArray:
@@ -132,7 +136,17 @@ def start_from(program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, r
     if at["unserved"].stop > at["unserved"].start:
         x[at["unserved"]] = result.unserved[live.bus]
         x[at["surplus"]] = result.surplus[live.bus]
-    return np.clip(np.where(np.isfinite(x), x, 0.0), vectors.lower, vectors.upper)
+    return _with_movement(program, vectors, np.clip(np.where(np.isfinite(x), x, 0.0), vectors.lower, vectors.upper))
+
+
+def _with_movement(program: AcProgram, vectors: AcVectors, x: FloatArray) -> FloatArray:
+    """Return the point with the movement that its outputs and bids imply, in place."""
+    if program.shape.movement:
+        at, n_resource = program.layout.variables, program.network.n_resource
+        output = np.bincount(program.shape.segment_resource, x[at["segment"]], n_resource)
+        moved = np.concatenate([output, x[at["bid"]]]) - vectors.row_upper[program.layout.rows["movement"]]
+        x[at["up"]], x[at["down"]] = np.maximum(moved, 0.0), np.maximum(-moved, 0.0)
+    return x
 
 
 def fill_segments(inputs: IntervalInputs, p: FloatArray) -> FloatArray:

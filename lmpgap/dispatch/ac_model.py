@@ -118,7 +118,7 @@ def make_layout(network: Network, shape: AcShape, options: DispatchOptions) -> A
     angle_min, angle_max = network.angle_min[live.branch], network.angle_max[live.branch]
     limited = np.flatnonzero(np.isfinite(angle_min) | np.isfinite(angle_max))
     n_segment, n_bid, n_flow = shape.segment_resource.size, shape.bid_bus.size, shape.flow_weights.shape[0]
-    n_moved = network.n_resource if shape.movement else 0
+    n_moved = network.n_resource + n_bid if shape.movement else 0
     soft_balance = live.n_bus if options.penalties.power_balance is not None else 0
     soft_flow = options.penalties.transmission is not None
     return AcLayout(
@@ -237,8 +237,9 @@ class AcProgram:
             flow_rows -= value["flow_excess"]
             slack = casadi.sum1(value["excess"]) + casadi.sum1(value["flow_excess"])
             cost += options.penalties.transmission * base * slack
-        movement = above_minimum - value["up"] + value["down"] if self.shape.movement else casadi.SX(0, 1)
+        movement = casadi.SX(0, 1)
         if self.shape.movement:
+            movement = casadi.vertcat(above_minimum, value["bid"]) - value["up"] + value["down"]
             cost += price["movement_price"] * casadi.sum1(value["up"] + value["down"])
         rows = casadi.vertcat(
             active, reactive, thermal_from, thermal_to, _entries(difference, layout.angle_limited), flow_rows, movement
