@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from lmpgap.dispatch.live import SMALLEST_IMPEDANCE
 from lmpgap.scenario.network import FloatArray, Network
 from lmpgap.scenario.settings import DcConvention
 
@@ -44,6 +45,8 @@ def linear_branches(
     that falls with the voltage, so the factor is divided by the product of the voltages at both ends of the series
     element. A tap ratio divides the susceptance and leaves the loss of a given flow alone. Negative resistances, as
     in star equivalents of three-winding transformers, count as lossless: a loss that falls with flow is not convex.
+    A branch without reactance, which these formulations cannot describe, counts as one whose reactance is its
+    impedance.
 
     Parameters
     ----------
@@ -51,11 +54,11 @@ def linear_branches(
         Voltage magnitudes [pu]; ``None`` is 1 pu at every series element.
     """
     r, x = network.r, network.x
-    square = r**2 + x**2 if convention.susceptance == "impedance" else x**2
-    # A purely resistive branch has no reactance to divide by; it carries nothing in a linear dispatch.
-    defined = (x != 0.0) & (square > 0.0)
-    susceptance = np.divide(x, square, out=np.zeros_like(x), where=defined)
-    loss_factor = np.divide(np.maximum(r, 0.0) * square, x**2, out=np.zeros_like(x), where=defined)
+    # A branch without reactance still connects its ends: let it count with its whole impedance.
+    reactance = np.where(x == 0.0, np.maximum(np.abs(r), SMALLEST_IMPEDANCE), x)
+    square = np.where(x == 0.0, 0.0, r**2) + reactance**2 if convention.susceptance == "impedance" else reactance**2
+    susceptance = reactance / square
+    loss_factor = np.maximum(r, 0.0) * square / reactance**2
     tap = network.tap if convention.taps else np.ones_like(network.tap)
     if voltage_profile is not None:
         product = voltage_profile[network.from_bus] / tap * voltage_profile[network.to_bus]

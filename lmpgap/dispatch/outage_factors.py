@@ -20,6 +20,7 @@ from scipy import sparse
 from scipy.sparse.linalg import SuperLU, splu
 
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.linear_model import linear_branches
 from lmpgap.scenario.network import BoolArray, Contingencies, FloatArray, IntArray, Network
 from lmpgap.scenario.settings import DcConvention
 
@@ -36,11 +37,7 @@ _CACHE_ELEMENTS = 64_000_000
 
 def linear_susceptance(network: Network, branch_in_service: BoolArray, convention: DcConvention) -> FloatArray:
     """Return the susceptance of each branch in the linear model [pu], (n_branch,), zero when out of service."""
-    x, r = network.x, network.r
-    b = 1.0 / x if convention.susceptance == "reactance" else x / (r**2 + x**2)
-    if convention.taps:
-        b = b / network.tap
-    return np.where(branch_in_service, b, 0.0)
+    return np.where(branch_in_service, linear_branches(network, convention).susceptance, 0.0)
 
 
 @dataclass(frozen=True, kw_only=True)

@@ -219,6 +219,8 @@ def _series(
     network: Network, inputs: IntervalInputs, convention: DcConvention
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Return susceptance, shift and conductance of every branch; zero out of service."""
+    if np.any(network.x == 0.0):
+        raise LmpgapError("the linear formulations are restated for branches with a reactance only")
     if convention.susceptance == "impedance":
         admittance = 1.0 / (network.r + 1j * network.x)
         b, g = -admittance.imag, admittance.real

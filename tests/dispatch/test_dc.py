@@ -198,6 +198,16 @@ def test_phase_shifter_and_tap_follow_the_convention() -> None:
     assert plain == pytest.approx([0.5, 0.5])
 
 
+@pytest.mark.parametrize("susceptance", ["reactance", "impedance"])
+def test_branch_without_reactance_still_connects(susceptance: str) -> None:
+    network, inputs = grid([("1", "2", 0.1, 0.0, FREE), ("1", "2", 0.0, 0.1, FREE)], [("1", 500.0, 10.0)], {"2": 100.0})
+    options = DispatchOptions(dc=DcConvention(susceptance=susceptance))  # type: ignore[arg-type]
+    assert solve("dc", network, inputs, options).point.p_from == pytest.approx([0.5, 0.5])
+    loss = solve("dc-loss", network, inputs, options).point.loss
+    flow = 0.5 + 0.25 * loss.sum()
+    assert loss == pytest.approx([0.1 * flow**2, 0.0], abs=1e-3)
+
+
 def test_shunt_is_load_at_nominal_voltage() -> None:
     network, inputs = grid([("1", "2", 0, 0.1, FREE)], [("1", 500.0, 10.0)], {"2": 100.0})
     result = solve("dc", network.with_changes(shunt_g=np.array([0.0, 0.05])), inputs)
