@@ -122,6 +122,18 @@ def test_losses_are_bought_once(name: str) -> None:
     assert 1.9 <= twice / bought <= 2.7
 
 
+def test_closed_form_with_the_loss_bought_at_the_sending_bus() -> None:
+    # Computed in closed form: cost c at bus 1, load D at bus 2, loss k D^2 bought at bus 1: price 2 = c (1 + 2 k D),
+    # over-collection c k D^2 = c x loss. k = 1e-4 per MW, D = 300, c = 20: 21.20 and 180.00.
+    network, inputs = grid([("1", "2", 0.01, 0.1, np.inf)], [("1", 2000.0, 20.0)], {"2": 300.0})
+    result = with_factors(network, inputs, np.array([1.0, 1.06]), distribution=np.array([1.0, 0.0]))
+    price = prices(network, result)
+    assert price == pytest.approx([20.0, 21.20], abs=1e-9)
+    assert result.p[0] * 100 == pytest.approx(309.0, abs=1e-3)
+    assert result.point.loss[0] * 100 == pytest.approx(9.0, abs=1e-6)
+    assert price[1] * 300.0 - price[0] * result.p[0] * 100 == pytest.approx(180.0, abs=0.02)
+
+
 def test_without_congestion_the_factors_alone_give_the_convex_prices() -> None:
     network, inputs = load_network("case14")
     convex, factor = own_factors(network, inputs)
