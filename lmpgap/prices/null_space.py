@@ -29,7 +29,8 @@ class LeftNullSpace:
     Attributes
     ----------
     basis : (n_row, n_direction)
-        Columns z with ``matrix.T @ z`` nearly zero; orthonormal in the normalised rows.
+        Columns z with ``matrix.T @ z`` nearly zero; orthonormal in the normalised rows, and each the direction of one
+        singular value.
     ratio : float
         Smallest over largest singular value that was found [-]; zero when there are more rows than columns.
     """
@@ -93,7 +94,9 @@ def _sparse(scaled: sparse.csr_array, threshold: float) -> tuple[FloatArray, flo
         small = singular < threshold * np.sqrt(largest)
         if not small.all() or count == n_row - 1:
             # One more inverse iteration: it brings A' z down to rounding, where the Lanczos vectors leave 1e-8.
-            sharpened = [inverse(column) for column in vectors[:, small].T]
+            # Smallest first, so that the others are freed from what it amplifies most.
+            order = np.argsort(singular[small], kind="stable")
+            sharpened = [inverse(column) for column in vectors[:, small].T[order]]
             basis = np.linalg.qr(np.column_stack(sharpened))[0] if sharpened else vectors[:, small]
             return basis, float(singular.min() / np.sqrt(largest))
         count *= 2

@@ -111,14 +111,17 @@ def price_intervals(
         limits = np.flatnonzero(has_part & ~reduced.free)
         # A direction that only nearly vanishes breaks stationarity when it is followed far: for each variable it may
         # do so by the floor, or by ten times what the solution itself leaves open.
-        drift = reduced.jacobian.T @ directions
-        drifts = np.flatnonzero(np.linalg.norm(drift, axis=1) > _ROUNDING)
-        allowed = np.maximum(base_mva * tolerances.stationarity_floor, 10.0 * left_open[drifts])
-        down, up = _reach(
-            directions[rows[moving]],
-            np.vstack([directions[limits], drift[drifts], -drift[drifts]]),
-            np.concatenate([z[limits], allowed, allowed]),
-        )
+        drift = np.abs(reduced.jacobian.T @ directions)
+        allowed = np.maximum(base_mva * tolerances.stationarity_floor, 10.0 * left_open)
+        with np.errstate(divide="ignore"):
+            farthest = np.min(allowed[:, None] / drift, axis=0)
+        near = np.flatnonzero(np.max(drift, axis=0) > _ROUNDING)
+        box = np.eye(directions.shape[1])[near]
+        sides = np.vstack([directions[limits], box, -box])
+        slack = np.concatenate([z[limits], farthest[near], farthest[near]])
+        if directions.shape[1] > 1:
+            moving = moving[_may_move(directions[rows[moving]], sides, slack, base_mva * tolerances.interval_width)]
+        down, up = _reach(directions[rows[moving]], sides, slack)
         low[moving] += multiplier_to_price(down, base_mva)
         high[moving] += multiplier_to_price(up, base_mva)
     # Below this width an interval says no more than the solver's own accuracy.
@@ -165,6 +168,13 @@ def _merge_bounds(system: StationaritySystem) -> StationaritySystem:
     )
 
 
+def _may_move(objective: FloatArray, limits: FloatArray, slack: FloatArray, least: float) -> BoolArray:
+    """Return True where ``objective @ t`` may range over more than ``least``, from the range of each entry of t."""
+    down, up = _reach(np.eye(objective.shape[1]), limits, slack)
+    reach = np.where(objective == 0.0, 0.0, np.abs(objective) * (up - down)[None, :])
+    return np.asarray(reach.sum(axis=1) > least)
+
+
 def _reach(objective: FloatArray, limits: FloatArray, slack: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return smallest and largest ``objective @ t`` over ``limits @ t + slack >= 0``, row by row.
 
@@ -186,7 +196,9 @@ def _reach(objective: FloatArray, limits: FloatArray, slack: FloatArray) -> tupl
     limits = limits / limit_length[:, None]
     slack = np.maximum(slack, 0.0) / limit_length
     scale = max(float(np.max(slack, initial=0.0)), 1.0)
-    ends = np.array([[_largest(side * row, limits, slack / scale) * scale for side in (-1, 1)] for row in distinct])
+    ends = np.array(
+        [[_largest(side * row, limits, slack / scale) * scale for side in (-1, 1)] for row in distinct]
+    ).reshape(-1, 2)
     below, above = -ends[which, 0], ends[which, 1]
     down = length * np.where(sign > 0, below, -above)
     up = length * np.where(sign > 0, above, -below)

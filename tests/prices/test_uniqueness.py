@@ -10,7 +10,7 @@ from scipy import sparse
 
 from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
 from lmpgap.dispatch.limits import FlowLimits
-from lmpgap.dispatch.result import DispatchResult
+from lmpgap.dispatch.result import DispatchResult, StationaritySystem
 from lmpgap.prices.components import constraints_of, split_prices
 from lmpgap.prices.null_space import left_null_space
 from lmpgap.prices.uniqueness import PriceIntervals, price_intervals
@@ -286,3 +286,30 @@ def test_screen_with_more_rows_than_columns_and_zero_rows():
         np.testing.assert_allclose(matrix.T @ found.basis, 0.0, atol=1e-7)
         assert found.basis[3, 0] == 0.0
         assert found.ratio < 1e-7
+
+
+@pytest.mark.parametrize(("apart", "unique"), [(0.0, False), (9e-6, True)])
+def test_nearly_parallel_gradients_are_not_parallel(apart, unique):
+    """Steep gradients that differ by more than the solution leaves open: following them would break stationarity.
+
+    Price 20 $/MWh, a limit with a multiplier of 15: if both gradients were one, the price could rise to 35 or fall
+    without end.
+    """
+    steep = 1000.0
+    jacobian = sparse.csr_array(steep * np.array([[1.0, 0.0], [1.0, apart]]))
+    z = np.array([2000.0, 1500.0])
+    system = StationaritySystem(
+        gradient=-(jacobian.T @ z),
+        jacobian=jacobian,
+        free=np.array([True, False]),
+        multipliers=z,
+        balance_rows=np.array([0, -1]),
+    )
+    found = price_intervals(system, 100.0)
+    assert found.n_direction == 1
+    assert found.unique[0] == unique
+    assert np.isnan(found.low[1])
+    if unique:
+        assert found.low[0] == found.high[0] == 20.0
+    else:
+        np.testing.assert_allclose([found.low[0], found.high[0]], [-np.inf, 35.0])
