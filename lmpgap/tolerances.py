@@ -23,8 +23,8 @@ class Tolerances:
     """Stopping tolerance of the nonlinear solver [-], in scaled units."""
 
     nonlinear_bound_relaxation: float = 1e-10
-    """How far the nonlinear solver may relax bounds before it starts [-]. Its default 1e-8, times penalties of 3000 $/MWh
-    on a hundred slacks, put 0.3 $/h of unreal cost and complementarity into a 48-bus hour."""
+    """How far the nonlinear solver may relax bounds before it starts [-]. Its default 1e-8, times penalties of
+    3000 $/MWh on a hundred slacks, put 0.3 $/h of unreal cost and complementarity into a 48-bus hour."""
 
     # --- certificate -------------------------------------------------------------------------------
     price_residual: float = 1e-3

@@ -13,6 +13,7 @@ from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from lmpgap.dispatch.names import FORMULATIONS
@@ -31,12 +32,16 @@ from lmpgap.report.view import build_view
 from lmpgap.runs.folder import RunFolder
 from lmpgap.runs.price import price
 from lmpgap.runs.schema import RUN_TABLES
+from lmpgap.runs.sweep import sweep
 from lmpgap.scenario.read import read_scenario
 from lmpgap.scenario.scenario import Scenario
-from lmpgap.settlement.settle import Settlement, settle
+from lmpgap.settlement.result import Settlement
+from lmpgap.settlement.settle import settle
 
 TASK = "weekly report"
-_STEPS = ("checking posted prices", "comparing", "settling", "writing")
+_STEPS = ("checking posted prices", "comparing", "settling", "sweeping load", "writing")
+SWEEP_FACTORS = np.linspace(0.5, 1.1, 7)
+"""Load factors of the sweep in the report, at the hour with the highest load."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -103,6 +108,8 @@ def weekly_report(
         progress(TASK, 2, len(_STEPS))
         settlement = settle_run(scenario, folder, today)
         progress(TASK, 3, len(_STEPS))
+        folder.write("sweep", sweep(scenario, SWEEP_FACTORS, formulations=tuple(formulations_of(folder))))
+        progress(TASK, 4, len(_STEPS))
     tables = {name: folder.table(name) for name in RUN_TABLES}
     sentences = tuple(
         weekly_sentences(
@@ -111,7 +118,8 @@ def weekly_report(
             differences=comparison.differences,
             drivers=comparison.drivers,
             findings=check.findings,
-            settlement=settlement,
+            claims=None if settlement is None else settlement.claims,
+            currency=currency_sign(scenario),
             wording=wording(scenario),
         )
     )
@@ -138,6 +146,51 @@ def compare_all(scenario: Scenario, folder: RunFolder, extra: Sequence[PriceSet]
         hubs=scenario.tables["hubs"],
         reference_weights=reference_weights(scenario) if extra else None,
     )
+
+
+def compare_one(folder: RunFolder, base: str, against: str, scenario: str | Path | None = None) -> Comparison:
+    """Compare one pair of price sets of a run and store it beside the pairs that are there.
+
+    Parameters
+    ----------
+    base, against
+        A formulation of the run, or ``"posted"``.
+    scenario
+        The run's scenario, if it moved since.
+
+    Raises
+    ------
+    DataError
+        When a price set does not exist or both are the same.
+    """
+    if base == against:
+        raise DataError(f"{base} is compared with itself; choose two price sets")
+    held = formulations_of(folder)
+    wrong = [name for name in (base, against) if name not in (*held, POSTED)]
+    if wrong:
+        raise DataError(f"the run has no prices of {' and '.join(wrong)}; it holds {', '.join(held)}")
+    extra: tuple[PriceSet, ...] = ()
+    read: Scenario | None = None
+    if POSTED in (base, against):
+        read = read_scenario(scenario or folder.scenario_folder)
+        posted = check_posted(read, {"operating_point": folder.table("operating_point")}).prices
+        if posted is None:
+            raise DataError(f"the scenario in {read.folder} has no posted prices of known nodes")
+        extra = (posted,)
+    with folder.writing():
+        others = {name: folder.table(name) for name in ("differences", "drivers")}
+        made = compare_run(
+            folder,
+            [(base, against)],
+            extra=extra,
+            hubs=None if read is None else read.tables["hubs"],
+            reference_weights=None if read is None else reference_weights(read),
+        )
+        for name, own in (("differences", made.differences), ("drivers", made.drivers)):
+            old = others[name]
+            kept = old[(old["base"] != base) | (old["against"] != against)]
+            folder.write(name, pd.concat([kept, own], ignore_index=True) if len(kept) else own)
+    return made
 
 
 def comparison_pairs(formulations: Sequence[str], *, posted: bool) -> list[tuple[str, str]]:
@@ -193,5 +246,10 @@ def wording(scenario: Scenario) -> Wording:
     return Wording(
         labels=IntervalLabels.of(scenario.interval_starts, settings.time_zone, settings.interval_minutes),
         names={bus: name for bus, name in names.items() if isinstance(name, str) and name},
-        unit=f"{'$' if settings.currency == 'USD' else settings.currency}/MWh",
+        unit=f"{currency_sign(scenario)}/MWh",
     )
+
+
+def currency_sign(scenario: Scenario) -> str:
+    """Return how amounts of the scenario's currency are marked in sentences."""
+    return "$" if scenario.settings.currency == "USD" else scenario.settings.currency

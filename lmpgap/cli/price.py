@@ -97,6 +97,9 @@ def compare(
     run: RunArgument,
     base: Annotated[str, typer.Option("--base", help="Price set to explain: a formulation, or posted.")] = "dc",
     against: Annotated[str, typer.Option("--against", help="Price set it is held against.")] = "ac",
+    scenario: Annotated[
+        Path | None, typer.Option("--scenario", metavar="SCENARIO", help="Scenario folder, if it moved since the run.")
+    ] = None,
     top: Annotated[int, typer.Option("--top", min=1, help="How many rows of each ranking to print.")] = 10,
     json: JsonOption = False,
 ) -> None:
@@ -106,11 +109,10 @@ def compare(
 
     Example: lmpgap compare runs/demo --base dc --against ac
     """
-    from lmpgap.divergence.compare import compare_run
     from lmpgap.runs.folder import RunFolder
+    from lmpgap.weekly import compare_one
 
-    comparison = compare_run(RunFolder(run), base, against)
-    rankings = comparison.rankings(top)
+    rankings = compare_one(RunFolder(run), base, against, scenario=scenario).rankings(top)
     if json:
         echo_json({"base": base, "against": against, **{name: records(frame) for name, frame in rankings.items()}})
         return

@@ -13,6 +13,7 @@ from lmpgap.divergence.differences import differences
 from lmpgap.divergence.drivers import drivers
 from lmpgap.divergence.price_set import PriceSet, common_ground
 from lmpgap.divergence.price_tables import price_set
+from lmpgap.divergence.ranking import rank_buses, rank_constraints, rank_intervals
 from lmpgap.errors import DataError
 from lmpgap.scenario.network import FloatArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
@@ -37,6 +38,15 @@ class Comparison:
     differences: pd.DataFrame
     drivers: pd.DataFrame
     own_reference: pd.DatetimeIndex
+
+    def rankings(self, most: int = 10) -> dict[str, pd.DataFrame]:
+        """Return the largest divergences by bus, interval and constraint, each with at most so many rows."""
+        count = len(self.differences)
+        return {
+            "buses": rank_buses(self.differences).head(most),
+            "intervals": rank_intervals(self.differences).head(most),
+            "constraints": rank_constraints(self.drivers, count).head(most),
+        }
 
 
 class RunTables(Protocol):

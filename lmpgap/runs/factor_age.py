@@ -59,7 +59,8 @@ def factor_age(
     solved: list[tuple[FloatArray, FloatArray]] = []
     progress(TASK, 0, total)
     for number, plan in enumerate(plans):
-        lmp, loss = [], []
+        lmp: list[FloatArray] = []
+        loss: list[FloatArray] = []
         for count, position in enumerate(positions, start=1):
             (item,) = solve_interval(
                 scenario.network, plan.interval(position), plan.settings, scenario.settings.hours, network_key
@@ -71,8 +72,8 @@ def factor_age(
         solved.append((np.array(lmp), np.array(loss)))
     (own_lmp, own_loss), *aged = solved
     rows = []
-    for age, (lmp, loss) in zip(ages, aged, strict=True):
-        size = np.abs(lmp - own_lmp)
+    for age, (aged_lmp, aged_loss) in zip(ages, aged, strict=True):
+        size = np.abs(aged_lmp - own_lmp)
         rows.append(
             {
                 "age_hours": age,
@@ -80,7 +81,7 @@ def factor_age(
                 "mean_absolute": float(np.nanmean(size)),
                 "percentile_95": float(np.nanpercentile(size, 95)),
                 "largest": float(np.nanmax(size)),
-                "loss_component": float(np.nanmean(np.abs(loss - own_loss))),
+                "loss_component": float(np.nanmean(np.abs(aged_loss - own_loss))),
             }
         )
     return pd.DataFrame(rows)

@@ -126,7 +126,7 @@ class Plan:
 
     def start(self, position: int) -> np.datetime64:
         """Return the start of an interval, UTC."""
-        return self._starts[position]
+        return np.datetime64(self._starts[position])
 
     def interval(self, position: int, formulations: tuple[str, ...] | None = None) -> PlannedInterval:
         """Return one interval with the keys of the given formulations (those of the plan by default)."""

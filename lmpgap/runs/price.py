@@ -275,7 +275,7 @@ def _backend(cluster: str | None) -> Iterator[None]:
     except ImportError as error:
         raise MissingExtraError("distributed", "cluster") from error
     try:
-        client = Client(cluster, timeout=10)
+        client = Client(cluster, timeout=10)  # type: ignore[no-untyped-call, unused-ignore]
     except (OSError, ValueError) as error:
         raise LmpgapError(f"no cluster scheduler answers at {cluster} ({error})") from error
     with client, parallel_config(backend="dask", wait_for_workers_timeout=60):

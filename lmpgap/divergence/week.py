@@ -1,0 +1,166 @@
+"""What happened in a week, in five sentences with figures."""
+
+from __future__ import annotations
+
+import pandas as pd
+
+from lmpgap.divergence.drivers import BINDS_ONLY_IN_AGAINST, BINDS_ONLY_IN_BASE
+from lmpgap.divergence.findings import KINDS
+from lmpgap.divergence.ladder import closest_to
+from lmpgap.divergence.posted import POSTED
+from lmpgap.divergence.ranking import divergence, rank_constraints
+from lmpgap.divergence.sentences import Wording, driver_sentences
+from lmpgap.prices.certificate import USABLE_VERDICTS
+
+
+def weekly_sentences(
+    *,
+    prices: pd.DataFrame,
+    solves: pd.DataFrame,
+    differences: pd.DataFrame,
+    drivers: pd.DataFrame,
+    findings: pd.DataFrame,
+    claims: pd.DataFrame | None = None,
+    currency: str = "$",
+    wording: Wording | None = None,
+) -> list[str]:
+    """Return the week in five sentences: how close, where furthest, why, the posted prices, the money.
+
+    Parameters
+    ----------
+    prices, solves, differences, drivers, findings
+        Run tables; any but ``prices`` and ``solves`` may be empty, and its sentence says that there is nothing to tell.
+    claims
+        Loss-component error per account: account, amount, amount_low, amount_high [currency], material. ``None`` where
+        there was nothing to settle.
+    currency
+        Sign or code before amounts.
+    """
+    wording = wording or Wording()
+    return [
+        _closeness(prices, solves, wording),
+        _furthest(differences, drivers, wording),
+        _cause(differences, drivers, wording),
+        _posted(differences, findings, wording),
+        _money(claims, currency),
+    ]
+
+
+def _closeness(prices: pd.DataFrame, solves: pd.DataFrame, wording: Wording) -> str:
+    held = list(dict.fromkeys(solves["formulation"]))
+    usable = solves["verdict"].isin(USABLE_VERDICTS)
+    apart = solves.loc[~usable, "formulation"].value_counts()
+    trust = (
+        "every solve may be used as a price"
+        if usable.all()
+        else "not to be used as a price: "
+        + ", ".join(
+            f"{count} of {(solves['formulation'] == name).sum()} solves of {name}" for name, count in apart.items()
+        )
+    )
+    errors = closest_to(prices, solves)
+    if errors.empty:
+        return f"{len(solves)} solves of {', '.join(held)} were made and none could be held against ac; {trust}."
+    told = ", ".join(
+        f"{row.formulation} by {row.mean_absolute_error:,.2f} {wording.unit} ({row.relative:.1%})"
+        for row in errors.itertuples()
+    )
+    best = errors["formulation"].iloc[0]
+    hours = int(errors["intervals"].iloc[0])
+    return f"Over {hours} hours {best} stayed closest to ac; on average prices missed it: {told}; {trust}."
+
+
+def _main_pair(differences: pd.DataFrame) -> tuple[str, str] | None:
+    """Return the pair the week is told by: the simplest formulation against the most exact."""
+    if differences.empty:
+        return None
+    pairs = differences[["base", "against"]].drop_duplicates()
+    told = [tuple(row) for row in pairs.itertuples(index=False) if row.base != POSTED]
+    return ("dc", "ac") if ("dc", "ac") in told else (told[-1] if told else None)
+
+
+def _furthest(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording) -> str:
+    pair = _main_pair(differences)
+    if pair is None:
+        return "No two price sets could be compared."
+    rows = differences[(differences["base"] == pair[0]) & (differences["against"] == pair[1])]
+    size = divergence(rows).abs()
+    if not (size > 0.005).any():
+        return f"The prices of {pair[0]} and {pair[1]} agree to the cent at every bus in every hour."
+    (sentence,) = driver_sentences(rows.loc[[size.idxmax()]], drivers, wording)
+    return f"The largest divergence: {sentence[0].lower()}{sentence[1:]}"
+
+
+def _cause(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording) -> str:
+    pair = _main_pair(differences)
+    if pair is None or drivers.empty:
+        return "No drivers of a difference are known."
+    rows = drivers[(drivers["base"] == pair[0]) & (drivers["against"] == pair[1])]
+    count = int(((differences["base"] == pair[0]) & (differences["against"] == pair[1])).sum())
+    # Within one driver the sources of one price are netted before sizes are taken.
+    net = rows.groupby(["interval_start", "bus", "driver"], observed=True, sort=False)["amount"].sum().abs()
+    means = (net.groupby("driver", observed=True).sum() / max(count, 1)).sort_values(ascending=False)
+    means = means[means >= 0.005]
+    if means.empty:
+        return f"Nothing drives {pair[0]} and {pair[1]} apart by a cent on average."
+    words = {
+        BINDS_ONLY_IN_BASE: f"limits that bind only in {pair[0]}",
+        BINDS_ONLY_IN_AGAINST: f"limits that bind only in {pair[1]}",
+    }
+    told = ", ".join(f"{words.get(str(driver), driver)} {amount:,.2f}" for driver, amount in means.head(4).items())
+    constraints = rank_constraints(rows, count)
+    text = f"What drives {pair[0]} and {pair[1]} apart, on average in {wording.unit}: {told}"
+    if constraints.empty or constraints["mean_absolute"].iloc[0] < 0.005:
+        return f"{text}; no single limit stands out."
+    top = constraints.iloc[0]
+    return (
+        f"{text}; the limit that matters most is {wording.name(str(top['constraint']))} "
+        f"({top['mean_absolute']:,.2f} on average, in {int(top['intervals'])} hours)."
+    )
+
+
+def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording) -> str:
+    rows = differences[(differences["base"] == POSTED) & (differences["against"] == "ac")]
+    if rows.empty:
+        rows = differences[differences["base"] == POSTED]
+    if rows.empty:
+        return "There are no posted prices to check."
+    against = rows["against"].iloc[-1]
+    rows = rows[rows["against"] == against]
+    size = divergence(rows).abs()
+    counts = findings["kind"].value_counts()
+    ordered = [(kind, int(counts[kind])) for kind in KINDS if kind in counts]
+    found = (
+        "the checks found nothing"
+        if not ordered
+        else f"the checks found {len(findings)} matter{'s' if len(findings) > 1 else ''}: "
+        + ", ".join(f"{count} {kind}" for kind, count in ordered)
+    )
+    return (
+        f"Posted prices differ from {against} by {size.mean():,.2f} {wording.unit} on average and by up to "
+        f"{size.max():,.2f}; {found}."
+    )
+
+
+def _money(claims: pd.DataFrame | None, currency: str) -> str:
+    if claims is None or claims.empty:
+        return "There are no positions to settle."
+    order = claims["amount"].abs().sort_values(ascending=False, kind="stable").index
+    largest = claims.loc[order].head(3)
+    figures = largest[["amount", "amount_low", "amount_high"]].to_numpy(float).tolist()
+    told = "; ".join(
+        f"{account} {_amount(amount, currency)} (between {_amount(low, currency)} and {_amount(high, currency)})"
+        for account, (amount, low, high) in zip(largest["account"], figures, strict=True)
+    )
+    material = int(claims["material"].sum())
+    verdict = (
+        "none of it is certain enough to claim"
+        if material == 0
+        else f"{material} of {len(claims)} account{'s' if len(claims) > 1 else ''} can claim a material amount"
+    )
+    return f"Loss component at stake, positive to the account's disadvantage: {told}; {verdict}."
+
+
+def _amount(value: float, currency: str) -> str:
+    sign = "-" if round(value) < 0 else ""
+    return f"{sign}{currency}{'' if len(currency) == 1 else ' '}{abs(value):,.0f}"
