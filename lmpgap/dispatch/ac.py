@@ -23,6 +23,7 @@ from lmpgap.dispatch.ac_interval import (
 )
 from lmpgap.dispatch.ac_model import AcProgram, AcShape
 from lmpgap.dispatch.ac_result import (
+    AcDerivatives,
     AcSolution,
     balance_multipliers,
     outputs_of,
@@ -269,6 +270,7 @@ class AcDispatch:
         network, live, options = self._network, program.layout.live, self._options
         base, penalties, dead = network.base_mva, options.penalties, live.dead()
         x, at = solution.x, program.layout.variables
+        derivatives = AcDerivatives.at(program, vectors, solution)
         point = point_of(program, x)
         cost = resource_cost(program, inputs, x)
         unserved, surplus = np.zeros(network.n_bus), np.zeros(network.n_bus)
@@ -299,9 +301,11 @@ class AcDispatch:
             point=point,
             multipliers=balance_multipliers(program, solution),
             constraints=ac_constraints(program, vectors, inputs, flow_limits, solution, point, options),
-            residuals=residuals(program, vectors, solution),
+            residuals=residuals(program, vectors, solution, derivatives),
             stationarity=(
-                stationarity_system(program, vectors, solution, options) if options.keep_stationarity else None
+                stationarity_system(program, vectors, solution, derivatives, options)
+                if options.keep_stationarity
+                else None
             ),
             notes=tuple(notes),
         )

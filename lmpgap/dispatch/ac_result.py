@@ -22,6 +22,7 @@ from lmpgap.dispatch.result import (
     SolverResiduals,
     StationaritySystem,
 )
+from lmpgap.dispatch.sparse_rows import ScaledRows, stacked_rows
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, incidence
 
 
@@ -40,19 +41,49 @@ class AcSolution:
     row_multiplier: FloatArray
 
 
-def residuals(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> SolverResiduals:
+@dataclass(frozen=True, kw_only=True)
+class AcDerivatives:
+    """Rows and derivatives of the program at a point.
+
+    Attributes
+    ----------
+    gradient : (n_var,)
+        Of the cost [$/h per internal unit].
+    value : (n_row,)
+    jacobian : sparse (n_row, n_var)
+    """
+
+    gradient: FloatArray
+    value: FloatArray
+    jacobian: sparse.csr_array
+
+    @staticmethod
+    def at(program: AcProgram, vectors: AcVectors, solution: AcSolution) -> AcDerivatives:
+        """Return the derivatives at a solution."""
+        value, jacobian = program.rows(solution.x, vectors.parameter)
+        gradient = program.gradient(solution.x, vectors.parameter)
+        return AcDerivatives(gradient=gradient, value=value, jacobian=jacobian)
+
+
+def residuals(
+    program: AcProgram, vectors: AcVectors, solution: AcSolution, derivatives: AcDerivatives
+) -> SolverResiduals:
     """Return how far a solution is from the conditions of a local optimum, from the functions themselves.
 
     ``primal`` is the largest violation of a row or bound [pu], ``dual`` the largest entry of the
     Lagrangian's gradient or of a multiplier that points away from any limit [$/h per pu], ``gap`` the sum of
     multiplier times slack [$/h].
     """
-    value, jacobian = program.rows(solution.x, vectors.parameter)
-    gradient = program.gradient(solution.x, vectors.parameter)
-    stationarity = gradient + jacobian.T @ solution.row_multiplier + solution.bound_multiplier
+    stationarity = derivatives.gradient + derivatives.jacobian.T @ solution.row_multiplier + solution.bound_multiplier
     primal, gap, stray = 0.0, 0.0, 0.0
     for point, low, high, multiplier, unit in (
-        (value, vectors.row_lower, vectors.row_upper, solution.row_multiplier, row_units(program, vectors)),
+        (
+            derivatives.value,
+            vectors.row_lower,
+            vectors.row_upper,
+            solution.row_multiplier,
+            row_units(program, vectors),
+        ),
         (solution.x, vectors.lower, vectors.upper, solution.bound_multiplier, np.ones(solution.x.size)),
     ):
         primal = max(primal, float(np.max(np.maximum(low - point, point - high) / unit, initial=0.0)))
@@ -115,7 +146,11 @@ def balance_multipliers(program: AcProgram, solution: AcSolution) -> BalanceMult
 
 
 def stationarity_system(
-    program: AcProgram, vectors: AcVectors, solution: AcSolution, options: DispatchOptions
+    program: AcProgram,
+    vectors: AcVectors,
+    solution: AcSolution,
+    derivatives: AcDerivatives,
+    options: DispatchOptions,
 ) -> StationaritySystem:
     """Return the active gradients, in the signs that `StationaritySystem` states.
 
@@ -123,29 +158,25 @@ def stationarity_system(
     """
     layout, base = program.layout, program.network.base_mva
     tolerances = options.tolerances
-    value, jacobian = program.rows(solution.x, vectors.parameter)
-    scale = row_units(program, vectors)
-    parts: list[sparse.csr_array] = []
+    parts: list[ScaledRows] = []
     multipliers: list[FloatArray] = []
     free: list[BoolArray] = []
+    # The active balances come first among the equations, so their rows are their own positions.
     balance = np.full(program.network.n_bus, -1, dtype=np.int64)
-    identity = sparse.eye_array(layout.n_var, format="csr")
+    balance[layout.live.bus] = np.arange(layout.live.n_bus)
     for matrix, point, low, high, multiplier, unit in (
-        (jacobian, value, vectors.row_lower, vectors.row_upper, solution.row_multiplier, scale),
         (
-            identity,
-            solution.x,
-            vectors.lower,
-            vectors.upper,
-            solution.bound_multiplier,
-            np.ones(layout.n_var),
+            derivatives.jacobian,
+            derivatives.value,
+            vectors.row_lower,
+            vectors.row_upper,
+            solution.row_multiplier,
+            row_units(program, vectors),
         ),
+        (None, solution.x, vectors.lower, vectors.upper, solution.bound_multiplier, np.ones(layout.n_var)),
     ):
         equation = low == high
-        if not parts:
-            # The active balances come first among the equations, so their rows are their own positions.
-            balance[layout.live.bus] = np.arange(layout.live.n_bus)
-        parts.append(-matrix[equation])
+        parts.append(ScaledRows(matrix, np.flatnonzero(equation), -1.0))
         multipliers.append(-multiplier[equation])
         free.append(np.ones(np.count_nonzero(equation), dtype=bool))
         for sign, bound in ((1.0, high), (-1.0, low)):
@@ -155,12 +186,12 @@ def stationarity_system(
             )
             active = ~equation & (sign * (bound - point) / unit <= room)
             rows = np.flatnonzero(active)
-            parts.append(sparse.csr_array(sparse.diags_array(sign / unit[rows]) @ matrix[rows]))
+            parts.append(ScaledRows(matrix, rows, sign / unit[rows]))
             multipliers.append(np.maximum(sign * multiplier[rows], 0.0) * unit[rows])
             free.append(np.zeros(rows.size, dtype=bool))
     return StationaritySystem(
-        gradient=program.gradient(solution.x, vectors.parameter),
-        jacobian=sparse.csr_array(sparse.vstack(parts, format="csr")),
+        gradient=derivatives.gradient,
+        jacobian=stacked_rows(parts, layout.n_var),
         free=np.concatenate(free),
         multipliers=np.concatenate(multipliers),
         balance_rows=balance,

@@ -25,6 +25,7 @@ import numpy as np
 from scipy import sparse
 
 from lmpgap.dispatch.result import SolverResiduals, SolveStatus, StationaritySystem
+from lmpgap.dispatch.sparse_rows import ScaledRows, stacked_rows
 from lmpgap.scenario.network import FloatArray, IntArray
 from lmpgap.tolerances import Tolerances
 
@@ -245,17 +246,15 @@ def stationarity_system(
     owner = np.repeat(np.arange(starts.size), program.cone_sizes)
     weight = cone / np.where(tail > 0.0, tail, 1.0)[owner]
     weight[starts] = -1.0
-    gather = sparse.csr_array((weight, (owner, np.arange(owner.size))), shape=(starts.size, owner.size))
-    identity = sparse.eye_array(program.n_var, format="csr")
-    jacobian = sparse.vstack(
+    jacobian = stacked_rows(
         [
-            -program.equality,
-            program.inequality[rows],
-            -identity[at_lower],
-            identity[at_upper],
-            -(gather[cones] @ program.cone),
+            ScaledRows(program.equality, np.arange(program.equality_rhs.size), -1.0),
+            ScaledRows(program.inequality, rows, 1.0),
+            ScaledRows(None, at_lower, -1.0),
+            ScaledRows(None, at_upper, 1.0),
+            ScaledRows(_boundary_gradients(program, cones, owner, weight), np.arange(cones.size), 1.0),
         ],
-        format="csr",
+        program.n_var,
     )
     multipliers = np.concatenate(
         [
@@ -268,11 +267,23 @@ def stationarity_system(
     )
     return StationaritySystem(
         gradient=program.linear + program.quadratic * x,
-        jacobian=sparse.csr_array(jacobian),
+        jacobian=jacobian,
         free=np.arange(multipliers.size) < program.equality_rhs.size,
         multipliers=multipliers,
         balance_rows=balance_rows,
     )
+
+
+def _boundary_gradients(
+    program: ConicProgram, cones: IntArray, owner: IntArray, weight: FloatArray
+) -> sparse.csr_array:
+    """Return minus the weighted sum of the rows of each chosen cone, sparse (n_chosen, n_var)."""
+    chosen = np.zeros(program.cone_sizes.size, dtype=bool)
+    chosen[cones] = True
+    used = np.flatnonzero(chosen[owner])
+    position = np.cumsum(chosen) - 1
+    gather = sparse.csr_array((-weight[used], (position[owner[used]], used)), shape=(cones.size, owner.size))
+    return sparse.csr_array(gather @ program.cone)
 
 
 def _largest(*parts: FloatArray) -> float:
