@@ -178,3 +178,26 @@ def test_rows_of_each_basis_add_up_to_the_surplus():
         assert sum(amount for _, b, amount in rows if b == basis) == pytest.approx(money.surplus)
     total = {item: amount for item, basis, amount in rows if basis == "total"}
     assert total["load payments"] - total["generator receipts"] == pytest.approx(total["surplus"])
+
+
+def test_given_delivery_factors_in_two_islands():
+    """Each island has its own energy price, reference and loss, and the money still closes."""
+    network = small_network(
+        5, [(0, 1, 0.1, 40.0), (1, 2, 0.1, np.inf), (3, 4, 0.1, np.inf)], resource_bus=[0, 2, 3], resistance=0.02
+    )
+    inputs = simple_inputs(network, [0, 60, 0, 0, 80], [(0, 200, 20), (1, 200, 50), (2, 200, 30)])
+    dispatch = DeliveryFactorDispatch(
+        network,
+        inputs.branch_in_service,
+        DispatchOptions(),
+        delivery_factor=np.array([0.97, 1.0, 1.01, 0.96, 1.0]),
+        loss_distribution=inputs.load_p,
+    )
+    result = dispatch.solve(inputs, FlowLimits.none(network.n_branch), None)
+    parts = split_prices(network, inputs.branch_in_service, result, inputs.load_p)
+    np.testing.assert_allclose(parts.lmp[[0, 2, 3]], [20.0, 50.0, 30.0], atol=1e-6)
+    assert parts.energy[0] != pytest.approx(parts.energy[3], abs=1.0)
+    np.testing.assert_allclose(parts.delivery_factor, [0.97, 1.0, 1.01, 0.96, 1.0])
+    np.testing.assert_allclose(parts.congestion[3:], 0.0, atol=1e-9)
+    money = balance_of(network, inputs, result)
+    assert money.relative_remainder < 1e-6
