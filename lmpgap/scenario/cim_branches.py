@@ -55,6 +55,10 @@ class Branches:
         self._positions = {
             step.text("SvTapStep.TapChanger"): step.number("SvTapStep.position") for step in model.of("SvTapStep")
         }
+        self._points = {
+            kind: model.referring(f"{kind}.{kind.removesuffix('Point')}")
+            for kind in ("RatioTapChangerTablePoint", "PhaseTapChangerTablePoint")
+        }
         for line in model.of(*_LINES):
             self._add_line(line)
         for transformer in model.of("PowerTransformer"):
@@ -198,9 +202,7 @@ class Branches:
         table = tap.text(table_name)
         if not table:
             return None
-        points = [
-            point for point in self._model.of(kind) if point.text(f"{kind}.{kind.removesuffix('Point')}") == table
-        ]
+        points = self._points[kind].get(table, [])
         return next((point for point in points if point.number("TapChangerTablePoint.step") == step), None)
 
     def _add(

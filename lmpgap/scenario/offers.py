@@ -21,8 +21,9 @@ class OfferCurves:
         Position of the resource that owns the segment; ascending.
     last : (n_resource,)
         Last segment of each resource; -1 without one.
-    static : (4, n_segment)
-        Start and end of the segment [pu], marginal price at both [$/MWh].
+    static : (6, n_segment)
+        Start and end of the segment [pu], marginal price at both [$/MWh], slope between them [$/MWh per pu], and the
+        point of the segment that is nearest to zero output [pu].
     static_end : (n_resource,)
         Where the curve ends [pu]; ``inf`` for a resource without a curve.
     slot, values, pointer
@@ -38,7 +39,7 @@ class OfferCurves:
     pointer: IntArray
 
     def at(self, position: int) -> tuple[FloatArray, FloatArray]:
-        """Return the segments (4, n_segment) and the ends of the curves (n_resource,) of an interval."""
+        """Return the segments (6, n_segment) and the ends of the curves (n_resource,) of an interval."""
         rows = slice(int(self.pointer[position]), int(self.pointer[position + 1]))
         if rows.stop == rows.start:
             return self.static, self.static_end
@@ -67,16 +68,12 @@ class OfferCurves:
             Integral of the marginal price from zero to ``p_min``, as far as the curve reaches [$/h]; negative
             where ``p_min`` is negative and prices are not.
         """
-        (start, end, price, end_price), curve_end = self.at(position)
+        (start, end, price, _, slope, zero), curve_end = self.at(position)
         p_max = np.maximum(p_min, np.minimum(p_max, curve_end))
         owner = self.resource
-        low, high = p_min[owner], p_max[owner]
-        span = end - start
-        slope = np.divide(end_price - price, span, out=np.zeros_like(span), where=span > 0)
-        first = np.clip(low, start, end)
-        past = np.clip(high, first, end)
+        first = np.minimum(np.maximum(p_min[owner], start), end)
+        past = np.minimum(np.maximum(p_max[owner], first), end)
         # Signed area between zero and p_min: positive for p_min > 0, negative for p_min < 0.
-        zero = np.clip(0.0, start, end)
         area = price * (first - zero) + 0.5 * slope * ((first - start) ** 2 - (zero - start) ** 2)
         fixed = base_mva * np.bincount(owner, weights=area, minlength=p_min.size)
         on = in_service[owner]
@@ -140,7 +137,11 @@ def build_offer_curves(
     slot = np.repeat(offset[curve_owner], width) + rank
 
     of_static = np.repeat(curve_interval, width) < 0
-    static_values = np.zeros((4, resource.size))
+    span = padded[1] - padded[0]
+    slope = np.divide(padded[3] - padded[2], span, out=np.zeros_like(span), where=span > 0)
+    padded = np.concatenate([padded, [slope, np.clip(0.0, padded[0], padded[1])]])
+
+    static_values = np.zeros((6, resource.size))
     static_values[:, slot[of_static]] = padded[:, of_static]
     last = np.where(n_slot > 0, offset + n_slot - 1, -1)
     static_end = np.full(n_resource, np.inf)

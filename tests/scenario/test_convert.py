@@ -111,6 +111,30 @@ def test_transformer_with_two_windings_is_the_circuit_in_ohms(equipment: Convers
     assert branch["emergency_rating_mva"] == ""
 
 
+def test_tabular_and_symmetrical_tap_changers(tmp_path: Path) -> None:
+    point = "PhaseTapChangerTablePoint"
+    body = EQUIPMENT.replace("<cim:PhaseTapChangerLinear ", "<cim:PhaseTapChangerTabular ").replace(
+        "</cim:PhaseTapChangerLinear>",
+        '<cim:PhaseTapChangerTabular.PhaseTapChangerTable rdf:resource="#_table"/></cim:PhaseTapChangerTabular>',
+    )
+    for step, angle, ratio in ((12, 1, 1.1), (13, 7.5, 0.95)):
+        values: dict[str, object] = {"TapChangerTablePoint__step": step, "TapChangerTablePoint__ratio": ratio}
+        values |= {f"{point}__angle": angle, f"{point}__PhaseTapChangerTable": "@table"}
+        body += item(point, f"p{step}", **values)
+    (tmp_path / "t.xml").write_text(document(body))
+    row = rows(convert(tmp_path / "t.xml", tmp_path / "tabular"), "branches")["Grid transformer"]
+    assert number(row, "phase_shift_deg") == -7.5
+    assert number(row, "tap_ratio") == pytest.approx((220 / 110) * (115 * 0.95) / (225 * 1.03))
+    body = EQUIPMENT.replace("cim:PhaseTapChangerLinear ", "cim:PhaseTapChangerSymmetrical ").replace(
+        "</cim:PhaseTapChangerLinear>",
+        "<cim:PhaseTapChangerNonLinear.voltageStepIncrement>2</cim:PhaseTapChangerNonLinear.voltageStepIncrement>"
+        "</cim:PhaseTapChangerSymmetrical>",
+    )
+    (tmp_path / "s.xml").write_text(document(body))
+    row = rows(convert(tmp_path / "s.xml", tmp_path / "symmetrical"), "branches")["Grid transformer"]
+    assert number(row, "phase_shift_deg") == pytest.approx(-math.degrees(2 * math.atan(3 * 0.02 / 2)))
+
+
 def test_transformer_with_three_windings_is_the_star_in_ohms(equipment: Conversion) -> None:
     branches = rows(equipment, "branches")
     kv = {1: 220.0, 2: 110.0, 3: 20.0}
