@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
@@ -16,6 +16,22 @@ from lmpgap.divergence.price_set import PriceSet, places
 from lmpgap.divergence.recovery import SparseFit, choose_among_alike, sparse_fit
 from lmpgap.scenario.network import FloatArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
+
+MODEL_DIFFERENCE = 0.05
+"""Share of an interval's largest congestion that may be left everywhere before it is a finding [-]: congestion from
+linear shift factors and from those of an AC operating point differ by a few percent. A rest at few nodes while all
+others are met to the cent is a finding whatever its size."""
+
+SMALLEST = 0.05
+"""Congestion below this is not worth a finding [$/MWh]: posted figures are rounded to cents, and operating points
+rebuilt from voltages repeat the flows of a cone solver to a few more."""
+
+SMALLEST_SHARE = 0.02
+"""The same for a single constraint, as a share of the interval's largest congestion [-]: small constraints are fitted
+to the difference between this operating point and the operator's."""
+
+FEW_NODES = 0.1
+"""Share of the nodes that may be wrong in themselves while constraints explain all others [-]."""
 
 AT_LIMIT = 0.9
 """Share of the limit from which a constraint counts as loaded when reasons for congestion are sought [-]; the
@@ -73,8 +89,8 @@ def explain_congestion(
     mix : (n_node, n_bus)
         What each node is made of.
     points
-        Operating points by formulation. The one whose shift factors explain the hours of largest congestion best is
-        used throughout.
+        Operating points by formulation. Of their own shift factors, and the linear ones at the flows of a nonlinear
+        one, those that explain the hours of largest congestion best are used throughout.
     probes
         Hours on which that is tried.
     """
@@ -82,27 +98,35 @@ def explain_congestion(
     tolerance = 2.0 * tolerances.posted_rounding
     n_interval = posted.n_interval
     rest = np.full(posted.lmp.shape, np.nan)
-    noise = np.full(n_interval, tolerance)
+    noise = np.full(n_interval, SMALLEST)
+    exact, met, congested = (np.zeros(n_interval, dtype=bool) for _ in range(3))
     used = [""] * n_interval
     rows: list[tuple[object, ...]] = []
-    chosen = _best_points(posted, mix, points, tolerance, probes)
+    tried = [*points.values(), *(p.with_linear_factors() for p in points.values() if p.formulation != "dc-loss")]
+    chosen = _best_points(posted, mix, tried, tolerance, probes)
     if chosen is None:
         return Explanation(recovered=_recovered_table(rows), rest=rest, noise=noise, formulation=tuple(used))
     before: tuple[tuple[str, str, str], ...] = ()
     for position in range(n_interval):
         if not chosen.known(position):
             continue
-        used[position] = chosen.formulation
+        used[position] = chosen.name
         problem = _interval(posted, mix, chosen, position)
         if problem is None:
             continue
         fit = problem.explain(tolerance, before)
         rest[position, problem.nodes] = fit.rest
-        if not fit.explained:
-            noise[position] = max(tolerance, 6.0 * float(np.median(np.abs(fit.rest))))
+        exact[position] = fit.explained
+        general = max(6.0 * float(np.median(np.abs(fit.rest))), MODEL_DIFFERENCE * problem.size)
+        noise[position] = max(SMALLEST, general)
+        met[position] = float(np.quantile(np.abs(fit.rest), 1.0 - FEW_NODES)) <= tolerance
+        congested[position] = problem.size > SMALLEST
         told = problem.rows(fit, posted)
         before = tuple((str(row[2]), str(row[3]), str(row[4])) for row in told)
         rows += told
+    # Where most hours are met to the cent this is the operator's own point, and a rest at few nodes is theirs.
+    if np.count_nonzero(exact & congested) > 0.5 * np.count_nonzero(congested):
+        noise[exact | met] = SMALLEST
     return Explanation(recovered=_recovered_table(rows), rest=rest, noise=noise, formulation=tuple(used))
 
 
@@ -111,8 +135,11 @@ def congestion_findings(explanation: Explanation, posted: PriceSet, labels: Inte
     recovered = explanation.recovered
     forward = recovered["direction"].isin(["forward", "upper"]).to_numpy()
     along = recovered["loading"].to_numpy(float) * np.where(forward, 1.0, -1.0)
-    reversed_rows = along <= -AT_LIMIT
-    doubtful = np.abs(along) < NOT_CREDIBLE
+    size = np.nanmax(np.where(np.isfinite(posted.congestion), np.abs(posted.congestion), 0.0), axis=1)
+    floor = np.maximum(SMALLEST, SMALLEST_SHARE * size)[places(posted.intervals, recovered["interval_start"])]
+    telling = np.abs(recovered["largest_effect"].to_numpy(float)) > floor
+    reversed_rows = (along <= -AT_LIMIT) & telling
+    doubtful = (np.abs(along) < NOT_CREDIBLE) & telling
     for name, rows in recovered[reversed_rows].groupby("constraint", sort=True):
         yield from _per_stretch(rows, str(name), "reversed-constraint", posted, labels)
     for name, rows in recovered[doubtful].groupby("constraint", sort=True):
@@ -161,10 +188,6 @@ def _rest_findings(
     rest = np.nan_to_num(explanation.rest)
     standing = np.abs(rest) > explanation.noise[:, None]
     crowded = standing.sum(axis=1) > most_nodes
-    # A rest everywhere that is small against the congestion is another operating point, not a fault.
-    size = np.nanmax(np.where(np.isfinite(posted.congestion), np.abs(posted.congestion), 0.0), axis=1)
-    diffuse = (np.abs(rest).max(axis=1) > 0.1 * size) & ~standing.any(axis=1)
-    diffuse &= np.abs(rest).max(axis=1) > explanation.noise.min(initial=np.inf)
     for node in np.flatnonzero((standing & ~crowded[:, None]).any(axis=0)).tolist():
         for first, last in stretches(np.flatnonzero(standing[:, node] & ~crowded)):
             part = rest[first : last + 1, node]
@@ -180,7 +203,7 @@ def _rest_findings(
                     f"$/MWh of the congestion posted at {posted.buses[node]} is explained by no constraint."
                 ),
             )
-    for first, last in stretches(np.flatnonzero(crowded | diffuse)):
+    for first, last in stretches(np.flatnonzero(crowded)):
         part = rest[first : last + 1]
         worst = np.unravel_index(int(np.argmax(np.abs(part))), part.shape)
         nodes = [str(posted.buses[i]) for i in np.argsort(-np.abs(part).max(axis=0), kind="stable")[:3]]
@@ -218,14 +241,43 @@ class _Interval:
         first_loaded = tuple(int(np.searchsorted(loaded, k)) for k in first if k in loaded)
         if len(first_loaded) != len(first):
             first_loaded = ()
-        fit = sparse_fit(self.congestion, self.columns[loaded], self.free, tolerance, first=first_loaded)
+        close = MODEL_DIFFERENCE * self.size
+        fit = _widened(
+            sparse_fit(self.congestion, self.columns[loaded], self.free, tolerance, first=first_loaded, close=close),
+            loaded,
+        )
         if fit.explained:
-            return _widened(fit, loaded)
-        wide = sparse_fit(self.congestion, self.columns, self.free, tolerance)
-        narrow = float(np.sum(fit.rest**2))
-        if wide.explained or float(np.sum(wide.rest**2)) < 0.25 * narrow:
-            return wide
-        return _widened(fit, loaded)
+            return fit
+        apart = self._but_few_nodes(fit, tolerance)
+        if apart is not None:
+            return apart
+        if np.max(np.abs(fit.rest)) <= close:
+            return fit
+        wide = sparse_fit(self.congestion, self.columns, self.free, tolerance, close=close)
+        # Enough constraints that do not bind fit anything; few that leave much less are worth telling.
+        much_better = np.max(np.abs(wide.rest)) < 0.25 * np.max(np.abs(fit.rest))
+        return wide if much_better and wide.chosen.size <= fit.chosen.size + 2 else fit
+
+    @property
+    def size(self) -> float:
+        """Largest congestion of the interval [$/MWh]."""
+        return float(np.max(np.abs(self.congestion), initial=0.0))
+
+    def _but_few_nodes(self, fit: SparseFit, tolerance: float) -> SparseFit | None:
+        """Return the same constraints fitted to all nodes but a few, if that explains the others."""
+        columns = np.vstack([self.columns[fit.chosen], self.free])
+        kept = np.arange(self.nodes.size)
+        rest = fit.rest
+        for _ in range(int(FEW_NODES * self.nodes.size)):
+            kept = np.delete(kept, np.argmax(np.abs(rest[kept])))
+            coefficient = np.linalg.lstsq(columns[:, kept].T, self.congestion[kept], rcond=None)[0]
+            rest = self.congestion - coefficient @ columns
+            if np.max(np.abs(rest[kept])) <= tolerance:
+                size = fit.chosen.size
+                return replace(
+                    fit, coefficient=np.asarray(coefficient[:size]), free=np.asarray(coefficient[size:]), rest=rest
+                )
+        return None
 
     def rows(self, fit: SparseFit, posted: PriceSet) -> list[tuple[object, ...]]:
         """Return the rows of the recovered constraints."""
@@ -302,19 +354,19 @@ def _interval(posted: PriceSet, mix: FloatArray, points: OperatingPoints, positi
 
 
 def _best_points(
-    posted: PriceSet, mix: FloatArray, points: Mapping[str, OperatingPoints], tolerance: float, probes: int
+    posted: PriceSet, mix: FloatArray, points: Sequence[OperatingPoints], tolerance: float, probes: int
 ) -> OperatingPoints | None:
     """Return the operating points that leave the least congestion unexplained in the most congested intervals."""
     if len(points) <= 1:
-        return next(iter(points.values()), None)
+        return next(iter(points), None)
     size = np.nanmax(np.where(np.isfinite(posted.congestion), np.abs(posted.congestion), 0.0), axis=1)
     tried = [
         position
         for position in np.argsort(-size, kind="stable").tolist()
-        if size[position] > tolerance and all(each.known(position) for each in points.values())
+        if size[position] > tolerance and all(each.known(position) for each in points)
     ][:probes]
     if not tried:
-        return next(iter(points.values()))
+        return points[0]
 
     def left(each: OperatingPoints) -> float:
         total = 0.0
@@ -324,7 +376,7 @@ def _best_points(
                 total += float(np.median(np.abs(problem.explain(tolerance, ()).rest)))
         return total
 
-    return min(points.values(), key=left)
+    return min(points, key=left)
 
 
 def _recovered_table(rows: list[tuple[object, ...]]) -> pd.DataFrame:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
@@ -12,7 +12,7 @@ from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import OperatingPoint
 from lmpgap.divergence.candidates import Candidates, candidates_at
 from lmpgap.divergence.price_set import places
-from lmpgap.divergence.shift_factors import AngleResponse, point_from_voltages
+from lmpgap.divergence.shift_factors import AngleResponse, linear_point_at, point_from_voltages
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 from lmpgap.scenario.settings import DcConvention
 
@@ -29,6 +29,8 @@ class OperatingPoints:
         The network, the inputs by position, and the convention of linear flows.
     magnitude, angle : (n_interval, n_bus)
         [pu], [rad]; ``nan`` where there is no solution.
+    linear_factors : bool
+        Take shift and loss factors from the linear flow equations at these flows.
     """
 
     formulation: str
@@ -37,7 +39,17 @@ class OperatingPoints:
     convention: DcConvention
     magnitude: FloatArray
     angle: FloatArray
+    linear_factors: bool = False
     _outages: dict[bytes, OutageFactors] = field(default_factory=dict)
+
+    @property
+    def name(self) -> str:
+        """How the operating point is called in sentences and tables."""
+        return f"{self.formulation}, linear factors" if self.linear_factors else self.formulation
+
+    def with_linear_factors(self) -> OperatingPoints:
+        """Return the same flows with linear shift and loss factors, as a market takes them from an AC solution."""
+        return replace(self, linear_factors=True)
 
     def known(self, position: int) -> bool:
         """Return whether the interval has an operating point."""
@@ -49,6 +61,8 @@ class OperatingPoints:
         point = point_from_voltages(
             self.network, service, self.formulation, self.magnitude[position], self.angle[position], self.convention
         )
+        if self.linear_factors:
+            point = linear_point_at(self.network, point, self.convention)
         return point, AngleResponse.of(self.network, service, point)
 
     def candidates(self, position: int) -> tuple[Candidates, FloatArray]:

@@ -64,6 +64,7 @@ def sparse_fit(
     *,
     most: int = 8,
     first: Sequence[int] = (),
+    close: float = 0.0,
 ) -> SparseFit:
     """Return the smallest set of columns that explains posted congestion within a tolerance.
 
@@ -83,10 +84,14 @@ def sparse_fit(
         A set to be tried first, such as that of the interval before; it is taken if it explains and none of its members
         is idle.
 
+    close
+        Largest rest with which a set will do if none explains [$/MWh].
+
     Returns
     -------
     SparseFit
-        If no set up to ``most`` explains, the set beyond which a further constraint does not halve the rest.
+        If no set up to ``most`` explains, the smallest one with a rest of at most ``close``, and if there is none either,
+        the largest for which every member halves the rest on average.
     """
     problem = _Problem(posted, columns, free, tolerance)
     if first:
@@ -103,10 +108,10 @@ def sparse_fit(
         best.append(min(explaining, key=lambda fit: fit.squares) if explaining else beam[0])
     if best[-1].worst <= tolerance:
         return problem.finished(problem.without_idle(best[-1]))
-    size = 0
-    while size + 1 < len(best) and best[size + 1].squares < 0.25 * best[size].squares:
-        size += 1
-    return problem.finished(best[size])
+    near = [fit for fit in best if fit.worst <= close]
+    if near:
+        return problem.finished(near[0])
+    return problem.finished(min(best, key=lambda fit: fit.squares * 4.0 ** len(fit.members)))
 
 
 @dataclass(frozen=True)

@@ -52,12 +52,31 @@ def point_from_voltages(
         c, s = voltage_products(network, magnitude, angle)
         return operating_point(network, BranchModel.of(network, on), magnitude**2, c, s, angle)
     model = linear_branches(network, convention)
-    b = np.where(on, model.susceptance, 0.0)
     difference = angle[network.from_bus] - angle[network.to_bus] - model.shift
-    flow = b * difference
-    factor = model.loss_factor if formulation == "dc-loss" else np.zeros_like(b)
+    flow = np.where(on, model.susceptance, 0.0) * difference
+    return _linear(network, on, convention, flow, angle, lossy=formulation == "dc-loss")
+
+
+def linear_point_at(network: Network, point: OperatingPoint, convention: DcConvention) -> OperatingPoint:
+    """Return the linear flow equations with losses at the active flows of another operating point.
+
+    Markets take shift factors from susceptances and loss factors from the flows of an AC solution; this is the point
+    that such prices belong to when only the AC solution is at hand.
+    """
+    on = point.dp_from != 0.0
+    flow = 0.5 * (point.p_from - point.p_to)
+    return _linear(network, on, convention, flow, point.angle, lossy=True)
+
+
+def _linear(
+    network: Network, on: BoolArray, convention: DcConvention, flow: FloatArray, angle: FloatArray, *, lossy: bool
+) -> OperatingPoint:
+    model = linear_branches(network, convention)
+    b = np.where(on, model.susceptance, 0.0)
+    factor = model.loss_factor if lossy else np.zeros_like(b)
     loss, slope = factor * flow**2, 2.0 * factor * b * flow
     none = np.zeros_like(b)
+    difference = np.divide(flow, b, out=np.zeros_like(b), where=b != 0.0)
     return OperatingPoint(
         w=np.ones(network.n_bus),
         angle=angle,
