@@ -100,6 +100,8 @@ class Tolerances:
     solver's prices, and delivery factors formed with it would be noise. Rounded data raise it further."""
 
     # --- posted prices -----------------------------------------------------------------------------
+    explained_congestion: float = 0.05
+    """Congestion that constraints may leave over and still account for it [$/MWh]; a few cents of rounding."""
     posted_rounding: float = 0.005
     """Half a cent: the rounding of posted prices and components [$/MWh]."""
     smallest_energy_price: float = 0.5

@@ -122,7 +122,9 @@ def driver_rows(base: PriceSet, against: PriceSet, tolerances: Tolerances = DEFA
     )
     gather.add(UNSPLIT, every, np.where(split, difference - components, difference))
 
-    keys = _add_congestion(gather, base, against, split, tolerances.shadow_price)
+    told = split & _is_told_by_constraint(base, tolerances) & _is_told_by_constraint(against, tolerances)
+    gather.add(CONGESTION, every, np.where(split & ~told, against.congestion - base.congestion, 0.0))
+    keys = _add_congestion(gather, base, against, told, tolerances.shadow_price)
     labels = _add_reactive(gather, base, against, split, offset=1 + len(keys))
     names = ("", *names_of(keys), *names_of(labels))
     return gather.rows(names)
@@ -130,6 +132,16 @@ def driver_rows(base: PriceSet, against: PriceSet, tolerances: Tolerances = DEFA
 
 def _is_split(prices: PriceSet) -> BoolArray:
     return np.asarray(np.isfinite(prices.energy + prices.congestion + prices.loss + prices.reactive))
+
+
+def _is_told_by_constraint(prices: PriceSet, tolerances: Tolerances) -> BoolArray:
+    """Return where the constraints of a set account for its congestion, (n_interval, 1).
+
+    Posted congestion without constraints, held against a run that knows its own, would seem to be explained by limits
+    that bind only there.
+    """
+    rest = np.abs(prices.congestion - prices.congestion_parts.summed(prices.n_interval))
+    return np.asarray(np.nanmax(rest, axis=1, keepdims=True, initial=0.0) <= tolerances.explained_congestion)
 
 
 def _energy_and_loss(base: PriceSet, against: PriceSet, tolerances: Tolerances) -> tuple[FloatArray, FloatArray]:
