@@ -11,9 +11,9 @@ on prices and not on multipliers as a whole: two identical parallel branches at 
 are not unique and prices that are.
 
 Every admissible z is the solver's z plus a combination of directions N with J' N = 0, or nearly so at a solution that
-is one only nearly. The screen finds these directions; without one that moves a price nothing remains to be done.
-Otherwise two linear programs per direction in which prices move, in as few variables as there are directions, give
-the interval.
+is one only nearly. Mostly a bound shows that there is none (`lmpgap.prices.regular`). Otherwise the screen finds these
+directions, and if they move prices, two linear programs per direction in which they do, in as few variables as there
+are directions, give the interval.
 
 Notes
 -----
@@ -27,12 +27,12 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import linprog
 
 from lmpgap.dispatch.result import StationaritySystem
 from lmpgap.errors import NumericalError
 from lmpgap.prices.components import multiplier_to_price
 from lmpgap.prices.null_space import left_null_space
+from lmpgap.prices.regular import independence
 from lmpgap.scenario.network import BoolArray, FloatArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
@@ -57,7 +57,8 @@ class PriceIntervals:
     unique : (n_bus,)
         True where there is only one price; False at dead buses.
     ratio : float
-        Smallest over largest singular value of the normalised active gradients [-]: how near to degenerate.
+        Smallest over largest singular value of the normalised active gradients [-]: how near to degenerate. Where
+        a bound on it settled the question, an estimate that is right to a factor of about three.
     n_direction : int
         Directions in which multipliers are free to move; not all of them move prices.
     """
@@ -94,12 +95,15 @@ def price_intervals(
     NumericalError
         When the interval search fails.
     """
+    live = stationarity.balance_rows >= 0
+    price = np.full(live.size, np.nan)
+    price[live] = multiplier_to_price(stationarity.multipliers[stationarity.balance_rows[live]], base_mva)
+    bound, estimate = independence(stationarity.jacobian, stationarity.free, tolerances.rank_ratio)
+    if bound >= tolerances.rank_ratio:
+        return PriceIntervals(low=price, high=price.copy(), unique=live, ratio=estimate, n_direction=0)
     reduced = _merge_bounds(stationarity)
     found = left_null_space(reduced.jacobian, tolerances.rank_ratio)
     z, rows = reduced.multipliers, reduced.balance_rows
-    live = rows >= 0
-    price = np.full(rows.size, np.nan)
-    price[live] = multiplier_to_price(z[rows[live]], base_mva)
     low, high = price.copy(), price.copy()
     directions = found.basis
     size = np.linalg.norm(directions, axis=1)
@@ -213,6 +217,9 @@ def _largest(direction: FloatArray, limits: FloatArray, slack: FloatArray) -> fl
         against = pull < 0.0
         step = np.min(-slack[against] / pull[against], initial=np.inf)
         return float(np.abs(direction[0]) * step)
+    # Here, because degenerate intervals are rare and the import takes longer than ten regular ones.
+    from scipy.optimize import linprog
+
     answer = linprog(
         -direction, A_ub=-limits, b_ub=slack, bounds=(None, None), method="highs-ds", options={"presolve": False}
     )

@@ -1,0 +1,152 @@
+"""A quick certificate that active gradients are linearly independent by a margin, so that prices are unique.
+
+Most intervals are regular, and finding the smallest singular value of their gradients to several digits costs more
+than the solve. A lower bound on it settles the question: with the rows normalised to unit length, and the rows that
+touch a single variable (bounds) set apart,
+
+    A = [[I, 0], [C, D]]        sigma_min(A) >= delta / sqrt(delta^2 + (1 + c)^2)
+
+where delta bounds sigma_min(D) from below and c bounds the norm of C from above. For delta, powers of B = (D D')^-1
+are applied to a few vectors v of independent normal entries. With u the direction in which B is largest,
+
+    |B^p v| >= |B|^p |u'v|
+
+and u'v is a standard normal number: that all of them are smaller than a thousandth has a probability of 1e-12.
+So |B| <= (1000 max |B^p v|)^(1/p), and delta = |B|^(-1/2).
+
+Notes
+-----
+After "Estimating the Largest Eigenvalue by the Power and Lanczos Algorithms with a Random Start", SIAM Journal on
+Matrix Analysis and Applications 13(4), 1992. The vectors come from a fixed seed: the same gradients give the same
+answer on every run.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from functools import lru_cache
+
+import numpy as np
+from scipy import sparse
+from scipy.sparse.linalg import splu
+
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
+
+_VECTORS = 4
+_POWERS = range(1, 17)
+"""The bound is below the truth by a factor of about 30 at power 4, of 5 at power 8 and of 2 at power 16."""
+_UNLUCKY = 1e-3
+"""A standard normal number is smaller than this in one of 1,250 cases; for all vectors together: 4e-13."""
+
+
+def independence(matrix: sparse.csr_array, equation: BoolArray, wanted: float) -> tuple[float, float]:
+    """Return a lower bound and an estimate of smallest over largest singular value, rows normalised.
+
+    Two bounds of one variable count as one row: a variable that cannot move stands at both.
+
+    Parameters
+    ----------
+    matrix : sparse (n_row, n_column)
+        Gradients.
+    equation : (n_row,)
+        True for rows that are equations and no bounds.
+    wanted
+        The search ends as soon as the bound is this large [-].
+
+    Returns
+    -------
+    bound : float
+        Zero where nothing was shown [-].
+    estimate : float
+        Above the bound by a factor of a few [-]; zero where nothing was shown.
+    """
+    nothing = 0.0, 0.0
+    if not matrix.has_canonical_format:
+        matrix = matrix.copy()
+        matrix.sum_duplicates()
+    n_row, n_column = matrix.shape
+    row = np.repeat(np.arange(n_row), np.diff(matrix.indptr))
+    data, column = matrix.data, matrix.indices
+    if not data.all():
+        used = data != 0.0
+        row, column, data = row[used], column[used], data[used]
+    count = np.bincount(row, minlength=n_row)
+    if n_row == 0 or not count.all():
+        return nothing
+    data = data / np.sqrt(np.bincount(row, data**2, minlength=n_row))[row]
+
+    single = count == 1
+    bounded = np.zeros(n_column, dtype=bool)
+    bounded[column[single[row]]] = True
+    of_equations = column[(single & equation)[row]]
+    if of_equations.size and _doubled(column, row, single, of_equations):
+        return nothing
+    rest, free = np.flatnonzero(~single), np.flatnonzero(~bounded)
+    size = np.abs(data)
+    # |A|_2^2 <= |A|_1 |A|_inf, where of two bounds of one variable one counts.
+    in_rest = ~single[row]
+    by_column = np.bincount(column[in_rest], size[in_rest], minlength=n_column) + bounded
+    by_row = np.bincount(row, size, minlength=n_row)
+    largest = float(np.sqrt(by_column.max() * by_row.max()))
+    if rest.size == 0:
+        return 1.0 / largest, 1.0 / largest
+    if rest.size > free.size:
+        return nothing
+    kept = in_rest & ~bounded[column]
+    block = _block(row[kept], column[kept], data[kept], rest, free, (n_row, n_column))
+    bound = estimate = 0.0
+    for smallest, guess in _smallest(block):
+        bound = smallest / (np.hypot(smallest, 1.0 + largest) * largest)
+        estimate = max(bound, min(guess, 1.0) / largest)
+        # A guess below what is wanted is an upper bound: no use in going on.
+        if bound >= wanted or guess / largest < wanted:
+            break
+    return float(bound), float(estimate)
+
+
+def _doubled(column: IntArray, row: IntArray, single: BoolArray, of_equations: IntArray) -> bool:
+    """Return whether an equation in one variable shares it with another row in that variable alone."""
+    n_single = np.bincount(column[single[row]], minlength=int(column.max()) + 1)
+    return bool(np.any(n_single[of_equations] > 1))
+
+
+def _block(
+    row: IntArray, column: IntArray, data: FloatArray, rest: IntArray, free: IntArray, shape: tuple[int, int]
+) -> sparse.csr_array:
+    """Return the rows and columns that are left, from the coordinates of their entries."""
+    new_row, new_column = np.zeros(shape[0], dtype=np.int32), np.zeros(shape[1], dtype=np.int32)
+    new_row[rest], new_column[free] = np.arange(rest.size), np.arange(free.size)
+    pointer = np.zeros(rest.size + 1, dtype=np.int32)
+    np.cumsum(np.bincount(new_row[row], minlength=rest.size), out=pointer[1:])
+    return sparse.csr_array((data, new_column[column], pointer), shape=(rest.size, free.size))
+
+
+def _smallest(block: sparse.csr_array) -> Iterator[tuple[float, float]]:
+    """Yield lower bound and estimate of the smallest singular value, the bound better with each power."""
+    gram = block @ block.T
+    try:
+        factor = splu(
+            sparse.csc_array((gram.data, gram.indices, gram.indptr), shape=gram.shape),  # symmetric
+            permc_spec="MMD_AT_PLUS_A",
+            diag_pivot_thresh=0.0,
+            options={"SymmetricMode": True},
+        )
+    except RuntimeError:
+        return
+    vectors = _start(gram.shape[0])
+    log_growth = np.zeros(_VECTORS)
+    for power in _POWERS:
+        vectors = factor.solve(vectors)
+        length = np.linalg.norm(vectors, axis=0)
+        if not np.all(np.isfinite(length)) or not length.all():
+            return
+        vectors /= length
+        log_growth += np.log(length)
+        if power > 1:
+            bound = np.exp(-0.5 * (log_growth.max() - np.log(_UNLUCKY)) / power)
+            yield float(bound), float(length.max() ** -0.5)
+
+
+@lru_cache(maxsize=64)
+def _start(size: int) -> FloatArray:
+    return np.random.default_rng(1992).standard_normal((size, _VECTORS))
