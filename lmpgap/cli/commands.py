@@ -5,13 +5,14 @@ from __future__ import annotations
 import typer
 
 from lmpgap.cli.check import check
+from lmpgap.cli.convert import convert
 from lmpgap.cli.price import compare, price
 from lmpgap.cli.settle import settle
 from lmpgap.cli.sweep import ageing, sweep
 from lmpgap.cli.verify import verify
 from lmpgap.cli.weekly import weekly
 
-COMMANDS = (check, price, compare, settle, weekly, sweep, ageing, verify)
+COMMANDS = (check, price, compare, settle, weekly, sweep, ageing, verify, convert)
 
 
 def register(app: typer.Typer) -> None:
