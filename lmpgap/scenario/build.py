@@ -42,8 +42,8 @@ def build_network(
         shift=np.deg2rad(branches.number("phase_shift_deg")),
         normal_rating=_limit(branches.number("normal_rating_mva"), np.inf) / base_mva,
         emergency_rating=_limit(branches.number("emergency_rating_mva"), np.inf) / base_mva,
-        angle_min=np.deg2rad(_limit(branches.number("angle_min_deg"), -np.inf)),
-        angle_max=np.deg2rad(_limit(branches.number("angle_max_deg"), np.inf)),
+        angle_min=_angle_limit(branches.number("angle_min_deg"), -np.inf),
+        angle_max=_angle_limit(branches.number("angle_max_deg"), np.inf),
         resources=tuple(resources.text("resource").tolist()),
         resource_bus=resources.text("bus").positions(positions["bus"]),
         q_min=_limit(resources.number("q_min_mvar"), -np.inf) / base_mva,
@@ -55,6 +55,12 @@ def build_network(
 
 def _limit(values: FloatArray, unlimited: float) -> FloatArray:
     return np.where(np.isnan(values), unlimited, values)
+
+
+def _angle_limit(degrees: FloatArray, unlimited: float) -> FloatArray:
+    """Return limits [rad]; a quarter turn and more says nothing, and its tangent would say something wrong."""
+    nothing = np.isnan(degrees) | (degrees * np.sign(unlimited) >= 90.0)
+    return np.where(nothing, unlimited, np.deg2rad(degrees))
 
 
 def _distinct(table: ColumnTable, name: str) -> list[str]:

@@ -21,7 +21,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from lmpgap.scenario.faults import FaultLog, clip_text, suggestion
+from lmpgap.scenario.faults import FaultLog, clip_text, nearest
 from lmpgap.scenario.network import IntArray
 from lmpgap.scenario.tables import TABLES
 from lmpgap.scenario.typed import Lines, RawColumn, TextColumn, row_numbers
@@ -86,20 +86,24 @@ def read_bytes(path: Path, folder: Path, log: FaultLog) -> bytes | None:
 def table_files(folder: Path, log: FaultLog) -> dict[str, Path]:
     """Return the file of each contract table that the folder holds; tell of files that look like tables."""
     found: dict[str, Path] = {}
+    strange: list[Path] = []
     for path in sorted(folder.iterdir()):
-        if path.suffix.lower() not in FORMATS:
+        # Editors and file systems leave copies such as ~$loads.csv and ._loads.csv beside a file.
+        if path.suffix.lower() not in FORMATS or path.name.startswith((".", "~")):
             continue
         if path.stem not in TABLES or path.suffix not in FORMATS:
-            hint = suggestion(path.stem, TABLES)
-            message = "is not a table of a scenario folder and is not read" + hint
-            if hint:
-                log.fault(path.name, message, kind="unknown table")
-            else:
-                log.warn(path.name, message, kind="unknown table")
+            strange.append(path)
         elif path.stem in found:
             log.fault(path.name, f"is there beside {found[path.stem].name}: keep one of the two")
         else:
             found[path.stem] = path
+    for path in strange:
+        meant = nearest(path.stem, TABLES)
+        message = "is not a table of a scenario folder and is not read"
+        if meant is not None and meant not in found:
+            log.fault(path.name, f"{message}; did you mean {meant!r}?", kind="unknown table")
+        else:
+            log.warn(path.name, message, kind="unknown table")
     return found
 
 

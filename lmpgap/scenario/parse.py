@@ -24,6 +24,8 @@ from lmpgap.scenario.typed import (
 
 _FLAGS = {"true": True, "false": False, "1": True, "0": False, "yes": True, "no": False}
 _YEARS = (1970, 2200)
+UNKNOWN_COLUMNS = 100
+"""Unknown columns that are named one by one."""
 
 
 def to_typed(spec: Table, raw: RawTable, log: FaultLog) -> ColumnTable | None:
@@ -60,7 +62,7 @@ def _match_columns(spec: Table, raw: RawTable, log: FaultLog) -> tuple[dict[str,
             unknown.append(name)
     free = [name for name in known if name not in where]
     misspelt = set()
-    for name in unknown:
+    for name in unknown[:UNKNOWN_COLUMNS]:
         meant = nearest(name, free) if name else None
         if meant is None:
             hint = suggestion(name, known) if name else ""
@@ -73,6 +75,9 @@ def _match_columns(spec: Table, raw: RawTable, log: FaultLog) -> tuple[dict[str,
             allowed=None if meant else ", ".join(known),
             kind="unknown column",
         )
+    if len(unknown) > UNKNOWN_COLUMNS:
+        rest = len(unknown) - UNKNOWN_COLUMNS
+        log.fault(raw.file, f"and {rest:,} more columns that this table does not have", kind="unknown column (rest)")
     for column in spec.columns:
         if column.required and column.name not in where:
             complete = False

@@ -110,6 +110,18 @@ _RULES: Sequence[_Rule] = (
     ),
     _Rule("branches", "angle_min_deg", _all_radians, "all limits are below pi/2: are they in radians?"),
     _Rule("branches", "angle_max_deg", _all_radians, "all limits are below pi/2: are they in radians?"),
+    _Rule(
+        "branches",
+        "angle_min_deg",
+        lambda values: (values <= -90) & (values > -180),
+        "is taken as no limit: a quarter turn is beyond what a branch can carry",
+    ),
+    _Rule(
+        "branches",
+        "angle_max_deg",
+        lambda values: (values >= 90) & (values < 180),
+        "is taken as no limit: a quarter turn is beyond what a branch can carry",
+    ),
     _Rule("branches", "phase_shift_deg", _radian_fractions, "is pi/6 or pi/12: is it in radians?"),
     _Rule(
         "branches",

@@ -33,6 +33,8 @@ def check_tables(tables: Mapping[str, ColumnTable], settings: ScenarioSettings, 
         _check_offers(tables["offers"], log)
     if "availability" in tables:
         _check_order(tables["availability"], "eco_min_mw", "eco_max_mw", log)
+    if "interface_limits" in tables:
+        _check_interface_limits(tables["interface_limits"], log)
     if "outages" in tables:
         _check_outages(tables["outages"], tables, log)
     for name, group in (("hubs", "hub"), ("reference_weights", None)):
@@ -277,6 +279,21 @@ def _check_offers(table: ColumnTable, log: FaultLog) -> None:
     )
 
 
+def _check_interface_limits(table: ColumnTable, log: FaultLog) -> None:
+    limit, reverse = table.number("limit_mw"), table.number("reverse_limit_mw")
+    with np.errstate(invalid="ignore"):
+        bad = limit < -reverse
+    log.rows(
+        table.file,
+        "order",
+        as_rows(bad),
+        table.lines,
+        lambda row: f"leaves no flow that is not above {limit[row]:g} and not below {-reverse[row]:g} MW",
+        column="reverse_limit_mw",
+        value=lambda row: f"{reverse[row]:g}",
+    )
+
+
 def _check_outages(table: ColumnTable, tables: Mapping[str, ColumnTable], log: FaultLog) -> None:
     first, last = table.time("first_interval"), table.time("last_interval")
     log.rows(
@@ -342,6 +359,13 @@ def _check_reference_setting(tables: Mapping[str, ColumnTable], settings: Scenar
             column="[reference] bus",
             value=clip_text(reference.bus),
             allowed="a bus of the table buses",
+        )
+    if reference.kind != "bus" and reference.bus:
+        log.warn(
+            "scenario.toml",
+            f'has no effect with kind = "{reference.kind}"',
+            column="[reference] bus",
+            value=clip_text(reference.bus),
         )
     weights = tables.get("reference_weights")
     if reference.kind == "weights" and weights is not None and weights.n_row == 0:

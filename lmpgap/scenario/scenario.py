@@ -32,7 +32,8 @@ class LazyFrames(Mapping[str, "pd.DataFrame"]):
     def __getitem__(self, name: str) -> pd.DataFrame:
         if name not in self._frames:
             self._frames[name] = to_frame(self._tables[name])
-        return self._frames[name]
+        # A shallow copy: what a caller changes in it stays with the caller.
+        return self._frames[name].copy(deep=False)
 
     def __iter__(self) -> Iterator[str]:
         return iter(self._tables)

@@ -311,10 +311,30 @@ def _line_of(text: str | None, key: str, section: str | None) -> int | None:
     return None
 
 
+_FORMS = """\
+## Posted files in another form
+
+`[posted]` tells how `posted` and `posted_constraints` differ from the contract, so that an operator's own file can be
+put into the folder as it is.
+
+- `[posted.columns]` maps contract columns to the operator's, e.g. `lmp = "Total price"`; columns that it does not
+  mention are not read, and a warning names them.
+- `shape = "wide"` without a column `node`: every column but `interval_start` is a node. With `node` and `date`: every
+  other column is an hour, `HE01` to `HE24`, `HE02*` for the second of two equal hours, or counted from 1 to 25. A
+  column `component` says which part of the price a row holds (`lmp`, `energy_component`, `congestion_component`,
+  `loss_component`, or what `[posted.columns]` maps to them); without it rows hold `lmp`. Empty cells are left out.
+- `clock = "hour_ending"`: a time names the end of its interval. `HE02` and numbers always name hours by their end with
+  this clock. A day and an hour may stand in two columns, `date` and `hour`.
+- `local = true`: times are local clock time of `time_zone`, without an offset. Of two equal labels of one node (and
+  version) the first is the earlier hour; a single one is taken as the earlier, and rows in the hour that clocks skip
+  are left out, each with a warning.
+"""
+
+
 def settings_as_markdown() -> str:
     """Return the documentation page of `scenario.toml`."""
     lines = ["# scenario.toml", "", "| section | key | meaning |", "|---|---|---|"]
     lines += [
         f"| [{section}] | {name} | {key.meaning} |" for section, keys in SECTIONS.items() for name, key in keys.items()
     ]
-    return "\n".join([*lines, ""])
+    return "\n".join([*lines, "", _FORMS])

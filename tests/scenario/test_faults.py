@@ -30,7 +30,7 @@ CASES = [
     (append("offers.csv", "Gas,2,120,150,60,60,70"), "offers.csv, line 5: has 7 fields where the header has 6"),
     (append("offers.csv", 'Gas,2,120,150,"60,60'), "offers.csv, line 5: cannot be taken apart: a quote is opened and not closed"),
     ({"contingency.csv": "contingency,branch\n"}, "contingency.csv: is not a table of a scenario folder and is not read; did you mean 'contingencies'?"),
-    ({"Loads.csv": BASE["loads.csv"]}, "Loads.csv: is not a table of a scenario folder and is not read; did you mean 'loads'?"),
+    ({"Loads.csv": BASE["loads.csv"], "loads.csv": None}, "Loads.csv: is not a table of a scenario folder and is not read; did you mean 'loads'?"),
     ({"bids.parquet": b"PAR1 this is not one"}, "bids.parquet: is not a readable Parquet file"),
     ({"bids.csv": "bus,segment,mw,price\nÖst,1,1,1\n".encode("latin-1")}, "bids.csv, line 2: is not UTF-8 text, so that names would be garbled"),
     ({"bids.csv": b"bus,segment\nNorth,\0\n"}, "bids.csv, line 2: is not a text file: it contains zero bytes"),
@@ -69,6 +69,8 @@ CASES = [
     ({"hubs.csv": "hub,bus,weight\nMid,South,1\nMid,East,-1\n"}, "hubs.csv, line 2, column hub: weights sum to zero, so that they cannot be scaled to sum 1 (found 'Mid')"),
     ({"interface_limits.csv": "interface,limit_mw\nWest,10\n"}, "interface_limits.csv, line 2, column interface: is not in interfaces (found 'West')"),
     # --- what must hold between columns
+    ({"interfaces.csv": "interface,branch,weight\nI,NS,1\n", "interface_limits.csv": "interface,limit_mw,reverse_limit_mw\nI,-50,40\n"}, "interface_limits.csv, line 2, column reverse_limit_mw: leaves no flow that is not above -50 and not below -40 MW (found '40')"),
+    ({"branches.csv": "branch,from_bus,to_bus,r_pu,x_pu,angle_min_deg\nA,North,South,0,1,100\n"}, "branches.csv, line 2, column angle_min_deg: is out of range (found '100'); allowed: a number not above 90 [deg]"),
     (swap("buses.csv", "0.9,1.1", "1.1,0.9"), "buses.csv, line 4, column v_min_pu: is above v_max_pu = 0.9 (found '1.1'); allowed: not above v_max_pu"),
     (swap("branches.csv", "NS,North,South", "NS,North,North"), "branches.csv, line 2, column to_bus: connects a bus with itself (found 'North')"),
     (swap("branches.csv", "0.01,0.1,", "0,0,"), "branches.csv, line 2, column x_pu: is zero, and so is r_pu (found '0')"),
@@ -212,6 +214,7 @@ def test_links_within_the_folder_are_fine(tmp_path: Path) -> None:
     assert read_scenario(folder).n_interval == 3
 
 
+@pytest.mark.skipif(not hasattr(os, "mkfifo"), reason="this system has no named pipes")
 def test_a_link_to_itself_and_a_pipe_do_not_hang(tmp_path: Path) -> None:
     folder = write(tmp_path / "scenario", {"loads.csv": None, "offers.csv": None})
     (folder / "loads.csv").symlink_to("loads.csv")

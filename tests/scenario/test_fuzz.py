@@ -72,7 +72,7 @@ def csv_tables(draw: st.DrawFn) -> tuple[str, str]:
 
 def check(folder: Path) -> None:
     """Read the folder: a scenario whose intervals hold finite numbers, or faults that can be shown."""
-    started = time.monotonic()
+    started = time.process_time()
     found: tuple[Fault, ...] = ()
     try:
         scenario = read_scenario(folder)
@@ -80,7 +80,7 @@ def check(folder: Path) -> None:
         found = error.faults
     if found:
         assert not any("\n" in str(fault) for fault in found)
-        assert time.monotonic() - started < LONGEST_SECONDS
+        assert time.process_time() - started < LONGEST_SECONDS
         return
     for position in {0, scenario.n_interval - 1}:
         inputs = scenario.inputs(position)
@@ -93,7 +93,7 @@ def check(folder: Path) -> None:
         assert weights.sum() == pytest.approx(1)
     assert scenario.network.n_bus == len(scenario.tables["buses"])
     assert len(scenario.hour_ending(scenario.interval_starts)) == scenario.n_interval
-    assert time.monotonic() - started < LONGEST_SECONDS
+    assert time.process_time() - started < LONGEST_SECONDS
 
 
 @fuzz

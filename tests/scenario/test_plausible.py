@@ -6,9 +6,10 @@ from __future__ import annotations
 import re
 from pathlib import Path
 
+import numpy as np
 import pytest
 
-from tests.scenario.folder import BASE, HOURS, append, swap, warnings
+from tests.scenario.folder import BASE, HOURS, read, swap, warnings
 
 
 def scaled(name: str, column: str, factor: float) -> dict[str, str]:
@@ -77,5 +78,28 @@ def test_unknown_nodes_are_kept_and_told_once_per_name(tmp_path: Path) -> None:
 
 
 def test_other_files_beside_the_tables(tmp_path: Path) -> None:
-    changes = {"README.md": "text", "xyz.csv": "a,b\n", **append("loads.csv")}
-    assert warnings(tmp_path, changes) == ["xyz.csv: is not a table of a scenario folder and is not read"]
+    changes = {"README.md": "text", "xyz.csv": "a,b\n", "loads_old.csv": "x\n", "~$loads.csv": "", "._loads.csv": ""}
+    assert warnings(tmp_path, changes) == [
+        f"{name}.csv: is not a table of a scenario folder and is not read" for name in ("loads_old", "xyz")
+    ]
+
+
+def test_a_quarter_turn_is_no_limit(tmp_path: Path) -> None:
+    text = (
+        "branch,from_bus,to_bus,r_pu,x_pu,angle_min_deg,angle_max_deg\n"
+        "NS,North,South,0.01,0.1,-360,360\nNE,North,East,0.01,0.1,-90,89\nSE,South,East,0.01,0.1,-30,30\n"
+    )
+    scenario = read(tmp_path, {"branches.csv": text})
+    np.testing.assert_allclose(scenario.network.angle_min, [-np.inf, -np.inf, np.deg2rad(-30)])
+    np.testing.assert_allclose(scenario.network.angle_max, [np.inf, np.deg2rad(89), np.deg2rad(30)])
+    assert [str(warning) for warning in scenario.warnings] == [
+        "branches.csv, line 3, column angle_min_deg: is taken as no limit: a quarter turn is beyond what a branch can "
+        "carry (found '-90')"
+    ]
+
+
+def test_a_reference_bus_without_effect(tmp_path: Path) -> None:
+    changes = {"scenario.toml": BASE["scenario.toml"] + '[reference]\nbus = "North"\n'}
+    assert warnings(tmp_path, changes) == [
+        "scenario.toml, column [reference] bus: has no effect with kind = \"load\" (found 'North')"
+    ]
