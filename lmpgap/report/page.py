@@ -7,7 +7,7 @@ from typing import Any
 
 import numpy as np
 
-from lmpgap.report.embed import ArrayStore, compact_matrix
+from lmpgap.report.embed import ArrayStore, compact_matrix, packed_amounts
 from lmpgap.report.palette import DARK, DEAD_BAND, LIGHT
 from lmpgap.report.pictures import Picture, opening_choice
 from lmpgap.report.text import plain
@@ -54,8 +54,8 @@ def page_data(view: WeeklyView, pictures: dict[str, Picture], store: ArrayStore)
                 "kinds": list(block.kinds),
                 "constraints": [plain(name) for name in block.constraints],
                 "start": store.add(block.start),
-                "key": store.add(block.key),
-                "amount": store.add(block.amount),
+                "key": store.add(block.key.astype(np.uint8) if len(block.kinds) <= 256 else block.key),
+                "amount": packed_amounts(block.amount, store),
                 "complete": block.complete,
             }
             for block in view.drivers

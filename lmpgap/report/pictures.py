@@ -17,7 +17,7 @@ from lmpgap.report.figures.curves import (
 from lmpgap.report.figures.evidence import account_stakes, factor_scatter, loading_sweep
 from lmpgap.report.figures.places import heatmap, network_map
 from lmpgap.report.figures.reasons import PARTS, hub_components, ladder, waterfall
-from lmpgap.report.figures.series import binding_strip, losses_timeline, shadow_timeline, verdict_strip
+from lmpgap.report.figures.series import LEAST_LOSS_MW, binding_strip, losses_timeline, shadow_timeline, verdict_strip
 from lmpgap.report.text import number
 from lmpgap.report.view.cube import COMPONENTS
 from lmpgap.report.view.model import FactorsView, Table, WeeklyView
@@ -66,7 +66,7 @@ def make_pictures(view: WeeklyView) -> dict[str, Picture]:
             title="The network at one hour",
             reading=(
                 "Triangles up: the first price set is higher; triangles down: lower; circles: no difference worth the "
-                "name. Hollow marks lie inside a price interval."
+                "name. Hollow marks lie inside a price interval. Everything beyond the scale has its end colour."
                 + (" Positions were worked out from the branches." if view.nodes.automatic else "")
             ),
             alternative=f"Network map of {pair} at {time}; the largest difference is at {place}.",
@@ -87,7 +87,10 @@ def make_pictures(view: WeeklyView) -> dict[str, Picture]:
         Picture(
             slot="duration",
             title="How often, how far",
-            reading="The size of the difference that is reached or exceeded in a share of all bus-hours.",
+            reading=(
+                "The size of the difference that is reached or exceeded in a share of all bus-hours; "
+                "the scale is logarithmic."
+            ),
             alternative="Duration curves of the differences between price sets.",
             figure=duration_curve(view),
             key_figures=_duration_table(view),
@@ -156,7 +159,9 @@ def make_pictures(view: WeeklyView) -> dict[str, Picture]:
                 key_figures=view.constraints.table,
             ),
         ]
-    if any(np.nan_to_num(losses).any() for losses in view.losses.losses_mw.values()):
+    if any(
+        np.abs(np.nan_to_num(losses)).max(initial=0.0) >= LEAST_LOSS_MW for losses in view.losses.losses_mw.values()
+    ):
         pictures.append(
             Picture(
                 slot="losses",
@@ -238,15 +243,27 @@ def _duration_table(view: WeeklyView) -> Table:
 
 
 def _profile_table(view: WeeklyView) -> Table:
+    """Return the profile in three blocks of hours side by side, so that it fits beside its picture on paper."""
     endings, size, mean = hour_profile_values(view, view.main)
+    cells = [
+        (f"{int(ending):02d}", number(float(one)), number(float(two), signed=True))
+        for ending, one, two in zip(endings, size, mean, strict=True)
+    ]
+    depth = -(-len(cells) // 3)
+    blank = ("", "", "")
+    rows = tuple(
+        tuple(
+            text
+            for block in range(3)
+            for text in (cells[block * depth + row] if block * depth + row < len(cells) else blank)
+        )
+        for row in range(depth)
+    )
     return Table(
-        caption=f"{view.main.against} less {view.main.base} by hour ending, {view.currency}/MWh",
-        columns=("Hour ending", "Mean size", "Mean"),
-        numeric=(True, True, True),
-        rows=tuple(
-            (f"{int(ending):02d}", number(float(one)), number(float(two), signed=True))
-            for ending, one, two in zip(endings, size, mean, strict=True)
-        ),
+        caption=f"{view.main.against} less {view.main.base} by hour ending (HE), {view.currency}/MWh",
+        columns=("HE", "Mean size", "Mean") * 3,
+        numeric=(True,) * 9,
+        rows=rows,
     )
 
 

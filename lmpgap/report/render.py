@@ -40,14 +40,19 @@ def resource(name: str) -> str:
     return (files("lmpgap.report") / "templates" / name).read_text(encoding="utf-8")
 
 
-def weekly_html(view: WeeklyView) -> str:
-    """Return the weekly report as HTML text that loads nothing from anywhere."""
+def plotly_library() -> str:
+    """Return the drawing library's script, fit to stand inside a script element."""
     from plotly.offline import get_plotlyjs
 
+    return str(get_plotlyjs()).replace("</script", "<\\/script")
+
+
+def weekly_html(view: WeeklyView) -> str:
+    """Return the weekly report as HTML text that loads nothing from anywhere."""
     pictures = make_pictures(view)
     store = ArrayStore()
     data = page_data(view, pictures, store)
-    library = get_plotlyjs().replace("</script", "<\\/script")
+    library = plotly_library()
     own = '"use strict";\n(() => {\n' + "\n".join(resource(name) for name in SCRIPTS) + "\n})();\n"
     return (
         environment()

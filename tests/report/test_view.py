@@ -12,7 +12,7 @@ from lmpgap.errors import DataError
 from lmpgap.report.text import number
 from lmpgap.report.view import WeeklyView, build_view
 from lmpgap.report.view.cube import COMPONENTS
-from lmpgap.report.view.drivers import driver_blocks
+from lmpgap.report.view.drivers import DUST, driver_blocks
 from lmpgap.report.view.hours import REPEATED_MARK, make_hours
 from lmpgap.report.view.layout import automatic_layout
 from tests.report.conftest import view_of
@@ -84,7 +84,7 @@ def test_drivers_of_each_cell_add_up_to_its_difference(view: WeeklyView) -> None
         expected = view.cube.difference(block.base, block.against).ravel()
         assert block.complete
         # what is left out is at most a few drivers below DUST each
-        np.testing.assert_allclose(total, expected, atol=4e-3)
+        np.testing.assert_allclose(total, expected, atol=7 * DUST)
 
 
 def test_where_and_when_are_sorted_and_lead_to_their_cell(view: WeeklyView) -> None:
@@ -234,7 +234,7 @@ def test_a_large_region_keeps_the_drivers_of_its_largest_differences(run: Synthe
         assert len(block.amount) <= 500
         size = np.abs(view.cube.difference(base, against)).ravel()
         kept = np.diff(block.start) > 0
-        assert size[kept].min() >= np.partition(size, -block.kept_cells - 5)[-block.kept_cells - 5] - 1e-3
+        assert size[kept].min() >= np.partition(size, -block.kept_cells - 5)[-block.kept_cells - 5] - 7 * DUST
 
 
 def test_automatic_layout_is_readable_and_repeatable() -> None:

@@ -43,9 +43,17 @@ def duration_curve(view: WeeklyView) -> go.Figure:
             )
         )
     figure.update_xaxes(title_text="share of bus-hours, %", range=[0, 100])
-    figure.update_yaxes(title_text=f"size of difference, {view.currency}/MWh", rangemode="tozero")
+    figure.update_yaxes(
+        title_text=f"size of difference, {view.currency}/MWh", type="log", range=_log_range(view), dtick=1
+    )
     figure.update_layout(hovermode="x unified")
     return figure
+
+
+def _log_range(view: WeeklyView) -> list[float]:
+    """Return the exponents between which the curves are drawn: a cent, and the largest difference of all pairs."""
+    largest = max((abs(pair.largest) for pair in duration_pairs(view) if np.isfinite(pair.largest)), default=1.0)
+    return [-2.0, float(np.log10(max(largest, 0.1))) + 0.1]
 
 
 def hour_profile_values(view: WeeklyView, pair: PairView) -> tuple[FloatArray, FloatArray, FloatArray]:

@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import numpy as np
 import plotly.graph_objects as go
 
 from lmpgap.report.figures.base import floats, labels, picture
 from lmpgap.report.palette import DASH, LIGHT, SYMBOL, colour
 from lmpgap.report.view.model import FactorsView, SweepView, WeeklyView
+from lmpgap.scenario.network import FloatArray
 
 MOST_ACCOUNTS = 20
 
@@ -48,6 +51,8 @@ def account_stakes(view: WeeklyView) -> go.Figure:
         zeroline=True,
         zerolinecolor=LIGHT["ink"],
         showgrid=True,
+        tickformat=",d",
+        nticks=7,
     )
     figure.update_yaxes(
         tickmode="array",
@@ -106,14 +111,27 @@ def factor_scatter(view: WeeklyView, factors: FactorsView) -> go.Figure:
 
 def loading_sweep(view: WeeklyView, sweep: SweepView) -> go.Figure:
     """Return the mean price error of each formulation against AC as load is scaled."""
+    return sweep_errors(sweep.factor, sweep.price_error, view.currency)
+
+
+def sweep_errors(factor: FloatArray, errors: Mapping[str, FloatArray], currency: str) -> go.Figure:
+    """Return one line of errors per formulation other than AC, over the load factors.
+
+    Parameters
+    ----------
+    factor : (n_factor,)
+        Load factors [-].
+    errors : by formulation (n_factor,)
+        Mean size of the difference from AC [currency/MWh].
+    """
     figure = picture(330, top=40)
-    for formulation, errors in sweep.price_error.items():
+    for formulation, values in errors.items():
         if formulation == "ac":
             continue
         figure.add_trace(
             go.Scatter(
-                x=floats(sweep.factor),
-                y=floats(errors),
+                x=floats(factor),
+                y=floats(values),
                 mode="lines+markers",
                 name=formulation,
                 line={"color": colour(formulation), "dash": DASH.get(formulation, "solid"), "width": 2.2},
@@ -121,7 +139,7 @@ def loading_sweep(view: WeeklyView, sweep: SweepView) -> go.Figure:
                 hovertemplate="%{y:.2f}",
             )
         )
-    figure.update_xaxes(title_text="load, multiple of this week's", showgrid=True)
-    figure.update_yaxes(title_text=f"mean error against ac, {view.currency}/MWh", rangemode="tozero")
-    figure.update_layout(hovermode="x unified")
+    figure.update_xaxes(title_text="load, multiple of the scenario's", showgrid=True)
+    figure.update_yaxes(title_text=f"mean error against ac, {currency}/MWh", rangemode="tozero")
+    figure.update_layout(hovermode="x unified", showlegend=True)
     return figure

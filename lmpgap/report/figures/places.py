@@ -158,7 +158,7 @@ def heatmap(view: WeeklyView) -> go.Figure:
         )
     )
     time_axis(figure, view.hours)
-    every = max(1, int(np.ceil(nodes.n / 40)))
+    every = max(1, int(np.ceil(nodes.n / 60)))
     figure.update_yaxes(
         autorange=False,
         range=[nodes.n - 0.5, -0.5],

@@ -10,6 +10,9 @@ from lmpgap.report.palette import DASH, LIGHT, SYMBOL, colour
 from lmpgap.report.view.model import WeeklyView
 from lmpgap.report.view.trust import USABLE
 
+LEAST_LOSS_MW = 1e-3
+"""Smaller losses are a solver's dust [MW]."""
+
 STRIP_ROWS = 12
 """Constraints in the strip of binding hours."""
 
@@ -60,7 +63,7 @@ def binding_strip(view: WeeklyView, hour: int) -> go.Figure:
             y1=boundary - 0.5,
             line={"color": LIGHT["grid"], "width": 1},
         )
-    figure.update_layout(hovermode="closest")
+    figure.update_layout(hovermode="closest", showlegend=True)
     return figure
 
 
@@ -96,7 +99,7 @@ def losses_timeline(view: WeeklyView, hour: int) -> go.Figure:
     figure = picture(280, top=40)
     hour_line(figure, hour)
     for formulation, losses in view.losses.losses_mw.items():
-        if not np.nan_to_num(losses).any():
+        if np.abs(np.nan_to_num(losses)).max(initial=0.0) < LEAST_LOSS_MW:
             continue
         figure.add_trace(
             go.Scatter(
@@ -162,4 +165,5 @@ def verdict_strip(view: WeeklyView, hour: int) -> go.Figure:
         showgrid=False,
         ticks="",
     )
+    figure.update_layout(showlegend=True)
     return figure

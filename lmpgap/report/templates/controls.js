@@ -231,7 +231,7 @@ function drawDriverTable(frame, rows, difference) {
   const body = table.createTBody();
   const total = rows.reduce((sum, row) => sum + row.amount, 0);
   const lines = rows.map((row) => [row.onlyIn ? `binds only in ${row.onlyIn}` : row.kind, row.constraint, row.amount]);
-  if (Math.abs(difference - total) >= 0.005) lines.push(["left over by rounding", "", difference - total]);
+  if (Math.abs(difference - total) >= 0.005) lines.push(["smaller drivers", "", difference - total]);
   lines.push(["difference", "", difference]);
   for (const [driver, constraint, amount] of lines) {
     const line = body.insertRow();

@@ -114,6 +114,12 @@ function insideInterval(bus, hour) {
   return false;
 }
 
+// Amounts are kept in three bytes each.
+function packed(reference, i) {
+  const bytes = decode(reference);
+  return (((bytes[3 * i] | (bytes[3 * i + 1] << 8) | (bytes[3 * i + 2] << 16)) << 8) >> 8) * reference.step;
+}
+
 // Drivers of one bus and hour, largest first; null where none were kept.
 function driversAt(bus, hour) {
   for (const block of page.drivers) {
@@ -124,13 +130,12 @@ function driversAt(bus, hour) {
     const cell = bus * nHour + hour;
     if (start[cell] === start[cell + 1]) return block.complete ? [] : null;
     const key = decode(block.key);
-    const amount = decode(block.amount);
     const rows = [];
     for (let i = start[cell]; i < start[cell + 1]; i++) {
       rows.push({
         kind: block.kinds[key[i]],
         constraint: block.constraints[key[i]],
-        amount: turned ? -amount[i] : amount[i],
+        amount: turned ? -packed(block.amount, i) : packed(block.amount, i),
         onlyIn: block.kinds[key[i]] === "binds only in base" ? block.base : block.kinds[key[i]] === "binds only in against" ? block.against : "",
       });
     }

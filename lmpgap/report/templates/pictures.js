@@ -78,13 +78,15 @@ const fill = {
     axis.range = [Math.max(n, 1) - 0.5, -0.5];
     const shapes = [];
     const narrow = window.innerWidth < 640;
-    if (rowsBy === "zone" && n > 40 && !sought) {
-      axis.tickvals = [];
-      axis.ticktext = [];
+    const zones = rowsBy === "zone" && !sought;
+    const named = n <= 60;
+    if (zones) {
+      if (!named) axis.tickvals = [];
+      if (!named) axis.ticktext = [];
       let first = 0;
       for (let row = 1; row <= n; row++) {
         if (row === n || page.buses.zone[rowOrder[row]] !== page.buses.zone[rowOrder[first]]) {
-          if (row - first >= n / 60) {
+          if (!named && row - first >= n / 60) {
             axis.tickvals.push((first + row - 1) / 2);
             axis.ticktext.push(plotText(page.buses.zone[rowOrder[first]] || "no zone", narrow ? 9 : 18));
           }
@@ -92,8 +94,9 @@ const fill = {
           first = row;
         }
       }
-    } else {
-      const every = Math.max(1, Math.ceil(n / 40));
+    }
+    if (!zones || named) {
+      const every = Math.max(1, Math.ceil(n / 60));
       axis.tickvals = [];
       axis.ticktext = [];
       for (let row = 0; row < n; row += every) {
@@ -101,6 +104,8 @@ const fill = {
         axis.ticktext.push(plotText(page.buses.name[rowOrder[row]], narrow ? 9 : 20));
       }
     }
+    axis.tickfont = { ...axis.tickfont, size: named && n > 35 ? 10 : 12 };
+    if (printing) spec.layout.height = Math.min(spec.layout.height, 560);
     const row = rowOrder.indexOf(choice.bus);
     const frame = { color: page.palette.light.ink, width: 1.2 };
     shapes.unshift({ type: "rect", x0: choice.hour - 0.5, x1: choice.hour + 0.5, y0: -0.5, y1: Math.max(n, 1) - 0.5, line: frame });
@@ -115,13 +120,14 @@ const fill = {
     const values = shown();
     const fixed = spec.fixed ?? (spec.fixed = spec.data.length);
     spec.data.length = fixed;
+    const least = spec.layout.yaxis.type === "log" ? 0.005 : 0;
     const own = values.slice(choice.bus * nHour, (choice.bus + 1) * nHour).map(Math.abs).filter((value) => !Number.isNaN(value)).sort().reverse();
     spec.data.push({
       type: "scatter",
       mode: "lines",
       name: `${plotText(page.buses.name[choice.bus], 18)}, as chosen`,
       x: Array.from(own, (_, i) => (own.length > 1 ? (100 * i) / (own.length - 1) : 0)),
-      y: own,
+      y: Array.from(own, (value) => Math.max(value, least)),
       line: { color: page.palette.light.above_2, width: 1.6, shape: "hv" },
       hovertemplate: "%{y:.2f}",
     });

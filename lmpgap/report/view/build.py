@@ -13,7 +13,7 @@ from lmpgap.report.text import number, percent
 from lmpgap.report.view.columns import checked_tables
 from lmpgap.report.view.constraints import constraints_view
 from lmpgap.report.view.cube import POSTED, PriceCube, make_cube
-from lmpgap.report.view.drivers import driver_blocks, why_table
+from lmpgap.report.view.drivers import driver_blocks, room_for_drivers, why_table
 from lmpgap.report.view.hours import Hours, make_hours
 from lmpgap.report.view.inputs import ReportScenario
 from lmpgap.report.view.losses import audit_table, factors_view, hub_view, losses_view, sweep_view
@@ -82,7 +82,7 @@ def build_view(
     )
     nodes = make_nodes(scenario, checked["operating_point"])
     cube = make_cube(checked["prices"], posted_matrices(scenario, posted, nodes, hours), nodes, hours)
-    blocks = driver_blocks(checked["drivers"], nodes, hours)
+    blocks = driver_blocks(checked["drivers"], nodes, hours, room_for_drivers(cube))
     inside = inside_cells(checked["differences"], nodes, hours)
     views = {
         key: pair_view(key, cube, inside, blocks)

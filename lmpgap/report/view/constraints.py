@@ -13,7 +13,13 @@ from lmpgap.report.view.model import ConstraintsView, Table
 MOST_CONSTRAINTS = 150
 """Constraints kept for the pictures; the rest are counted."""
 
-_TABLE_ROWS = 15
+_TABLE_ROWS = 12
+
+VOLTAGE_KINDS = ("voltage", "reactive")
+"""Kinds whose shadow price is not per MW or MVA of a flow."""
+
+FIRST_FLOWS, FIRST_OTHERS = 8, 4
+"""How many of each stand first."""
 
 
 def constraints_view(constraints: pd.DataFrame, cube: PriceCube, hours: Hours, currency: str) -> ConstraintsView:
@@ -30,9 +36,11 @@ def constraints_view(constraints: pd.DataFrame, cube: PriceCube, hours: Hours, c
     if frame.empty:
         return _nothing(cube, currency)
     totals = frame.groupby("constraint")["shadow_price"].sum().sort_values(ascending=False, kind="stable")
-    names = list(totals.index[:MOST_CONSTRAINTS])
     first = frame.drop_duplicates("constraint").set_index("constraint")
-    code = pd.Index(names).get_indexer(frame["constraint"])
+    names = _ordered(list(totals.index), dict(zip(first.index, first["kind"].astype(str), strict=True)))[
+        :MOST_CONSTRAINTS
+    ]
+    code = pd.Index(names).get_indexer(pd.Index(frame["constraint"]))
     shadow, penalty = {}, {}
     for formulation in cube.formulations:
         chosen = ((frame["formulation"] == formulation) & (code >= 0)).to_numpy()
@@ -62,9 +70,27 @@ def constraints_view(constraints: pd.DataFrame, cube: PriceCube, hours: Hours, c
         unit=units,
         shadow=shadow,
         at_penalty=penalty,
-        table=_table(cube, currency, tuple(rows_text), f"{len(rows_text)} of {len(totals)} binding constraints."),
+        table=_table(
+            cube,
+            currency,
+            tuple(rows_text),
+            f"{len(rows_text)} of {len(totals)} binding constraints; limits on flows first.",
+        ),
         left_out=len(totals) - len(names),
     )
+
+
+def _ordered(names: list[str], kinds: dict[str, str]) -> list[str]:
+    """Return the names so that the first ones hold limits on flows and limits on voltages, each in their order.
+
+    Shadow prices per MW and per unit of voltage cannot be ranked in one list: the largest flow limits come first,
+    then the largest others, then the rest.
+    """
+    flows = [name for name in names if kinds[name] not in VOLTAGE_KINDS]
+    others = [name for name in names if kinds[name] in VOLTAGE_KINDS]
+    first_flows = max(FIRST_FLOWS, FIRST_FLOWS + FIRST_OTHERS - len(others))
+    first_others = FIRST_FLOWS + FIRST_OTHERS - min(len(flows), first_flows)
+    return flows[:first_flows] + others[:first_others] + flows[first_flows:] + others[first_others:]
 
 
 def _nothing(cube: PriceCube, currency: str) -> ConstraintsView:

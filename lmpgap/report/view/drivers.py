@@ -5,16 +5,25 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from lmpgap.divergence.drivers import REACTIVE
 from lmpgap.report.text import number, percent
+from lmpgap.report.view.cube import COMPONENTS, PriceCube
 from lmpgap.report.view.hours import Hours
 from lmpgap.report.view.model import DriverBlock, PairView, Table
 from lmpgap.report.view.nodes import Nodes
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
 
 MOST_ROWS = 1_200_000
-"""Driver rows that the page may hold over all pairs; 6 bytes each before encoding."""
+"""Driver rows that the page may hold over all pairs; 4 to 5 bytes each before encoding."""
 
-DUST = 0.0005
-"""Drivers below a twentieth of a cent are left out of the page [currency/MWh]."""
+PAGE_BYTES, FIXED_BYTES = 38e6, 7e6
+"""Size the page is held to, and what is not prices or drivers: drawing library, figures, tables [byte]."""
+
+ROW_BYTES, BASE64 = 5, 4 / 3
+"""Size of a driver row, and the growth of bytes as text."""
+
+DUST = 0.005
+"""Drivers below half a cent are left out of the page, which shows their sum as smaller drivers [currency/MWh]."""
 
 
 def driver_blocks(
@@ -42,13 +51,9 @@ def driver_blocks(
 def _block(base: str, against: str, part: pd.DataFrame, nodes: Nodes, hours: Hours, most_rows: int) -> DriverBlock:
     row, column = nodes.position(part["bus"]), hours.position(part["interval_start"])
     amount = part["amount"].to_numpy(dtype=float)
-    kept = (row >= 0) & (column >= 0) & (np.abs(amount) >= DUST)
-    constraint = part["constraint"].astype(object).where(part["constraint"].notna(), "").astype(str)
-    keys = pd.MultiIndex.from_arrays([part["driver"].astype(str), constraint])
-    code, unique = pd.factorize(keys, sort=True)
-    cell = (row * hours.n + column)[kept]
-    code, amount = np.asarray(code)[kept], amount[kept]
+    code, unique = _keys(part)
     n_cell = nodes.n * hours.n
+    cell, code, amount = _summed(row * hours.n + column, code, amount, (row >= 0) & (column >= 0), len(unique))
     complete = len(cell) <= most_rows
     if not complete:
         size = np.abs(np.bincount(cell, weights=amount, minlength=n_cell))
@@ -71,6 +76,43 @@ def _block(base: str, against: str, part: pd.DataFrame, nodes: Nodes, hours: Hou
         complete=complete,
         kept_cells=int((counts > 0).sum()),
     )
+
+
+def _keys(part: pd.DataFrame) -> tuple[IntArray, list[tuple[str, str]]]:
+    """Return the key of each row and the keys as (driver, constraint); reactive drivers are one key."""
+    driver_code, drivers = pd.factorize(part["driver"])
+    constraint_code, constraints = pd.factorize(part["constraint"].fillna(""))
+    constraint_code = np.where(np.asarray(drivers == REACTIVE)[driver_code], -1, constraint_code)
+    combined = driver_code * (len(constraints) + 1) + constraint_code + 1
+    unique, code = np.unique(combined, return_inverse=True)
+    names = ["", *(str(name) for name in constraints)]
+    return np.asarray(code, dtype=np.int64), [
+        (str(drivers[one // len(names)]), names[one % len(names)]) for one in unique.tolist()
+    ]
+
+
+def _summed(
+    cell: IntArray, code: IntArray, amount: FloatArray, known: BoolArray, n_key: int
+) -> tuple[IntArray, IntArray, FloatArray]:
+    """Return one row per cell and key, dust left out."""
+    place = (cell * n_key + code)[known]
+    amount = amount[known]
+    order = np.argsort(place, kind="stable")
+    place, amount = place[order], amount[order]
+    first = np.flatnonzero(np.r_[True, place[1:] != place[:-1]]) if place.size else np.zeros(0, np.int64)
+    total = np.add.reduceat(amount, first) if place.size else amount
+    kept = np.abs(total) >= DUST
+    place, total = place[first][kept], total[kept]
+    return place // n_key, place % n_key, total
+
+
+def room_for_drivers(cube: PriceCube) -> int:
+    """Return how many driver rows keep a page with these prices below its size limit, at most `MOST_ROWS`."""
+    parts = [cube.get(name, part) for name in cube.sets for part in COMPONENTS]
+    # the price itself is the sum of its parts on the page; parts that are zero or the same everywhere cost nothing
+    full = sum(bool(part.any()) and bool(np.ptp(np.nan_to_num(part), axis=0).any()) for part in parts) - len(cube.sets)
+    prices = full * parts[0].nbytes * BASE64
+    return int(np.clip((PAGE_BYTES - FIXED_BYTES - prices) / (ROW_BYTES * BASE64), 50_000, MOST_ROWS))
 
 
 def driver_words(kind: str, base: str, against: str) -> str:

@@ -53,7 +53,9 @@ class Hours:
 
     def position(self, times: pd.Series) -> IntArray:
         """Return the position of each time, -1 where it is not on the axis."""
-        return np.asarray(self.starts.get_indexer(pd.DatetimeIndex(pd.to_datetime(times, utc=True))), dtype=np.int64)
+        code, unique = pd.factorize(pd.to_datetime(times, utc=True))
+        place = np.append(self.starts.get_indexer(pd.DatetimeIndex(unique)), -1)
+        return np.asarray(place[code], dtype=np.int64)
 
 
 def day_name(stamp: pd.Timestamp) -> str:

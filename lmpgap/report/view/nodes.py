@@ -49,6 +49,10 @@ class Nodes:
 
     def position(self, buses: pd.Series) -> IntArray:
         """Return the position of each bus identifier, -1 where it is unknown."""
+        if isinstance(buses.dtype, pd.CategoricalDtype):
+            code = np.asarray(buses.cat.codes, dtype=np.int64)
+            place = np.append(self.position(buses.cat.categories.to_series()), -1)
+            return np.asarray(place[code])
         return np.asarray(pd.Index(self.bus).get_indexer(pd.Index(buses.astype(str))), dtype=np.int64)
 
 

@@ -140,7 +140,7 @@ def findings_table(findings: pd.DataFrame, hours: Hours) -> Table:
                     f"{len(part):,}",
                     f"{part['node'].replace('', np.nan).nunique()}",
                     f"{part.loc[part['place'] >= 0, 'place'].nunique()}",
-                    f"{number(float(amount))} {unit}".strip() if pd.notna(amount) else "",
+                    _sized(float(amount), unit),
                     hours.label[int(worst["place"])] if worst["place"] >= 0 else "whole week",
                     str(worst["sentence"]),
                 )
@@ -151,6 +151,21 @@ def findings_table(findings: pd.DataFrame, hours: Hours) -> Table:
         numeric=(False, True, True, True, True, False, False),
         rows=tuple(rows),
     )
+
+
+def _sized(amount: float, unit: str) -> str:
+    """Return a size with its unit; counts have no decimals, and a bare figure no unit."""
+    if not np.isfinite(amount):
+        return ""
+    places = 2 if "/" in unit else 0 if float(amount).is_integer() else 4
+    return f"{number(amount, places)} {'' if unit == '-' else unit}".strip()
+
+
+COMPONENT_WORDS = {
+    "lmp": "whole price",
+    "loss": "loss, against re-solved prices",
+    "delivery-factor": "loss, against own delivery factors",
+}
 
 
 def settlement_table(settlement: pd.DataFrame, currency: str) -> Table:
@@ -164,7 +179,7 @@ def settlement_table(settlement: pd.DataFrame, currency: str) -> Table:
             rows.append(
                 (
                     str(account),
-                    str(component).replace("_", " "),
+                    COMPONENT_WORDS.get(str(component), str(component).replace("_", " ")),
                     number(float(part["mw"].abs().sum()), 0),
                     number(float(part["amount"].sum()), 0, signed=True),
                     number(float(part["amount_low"].sum()), 0, signed=True),
