@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import time
 from abc import ABC, abstractmethod
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -23,17 +23,19 @@ from lmpgap.dispatch.result import (
     SolveStatus,
     no_solution,
 )
-from lmpgap.dispatch.supply import SupplyResult, pattern_key, read_supply
+from lmpgap.dispatch.supply import SupplyResult, pattern_key, read_supply, with_flow_limits
 from lmpgap.errors import LmpgapError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
 
 
 @dataclass(frozen=True, kw_only=True)
 class ConvexModel:
-    """Matrices of one topology and pattern of offers.
+    """Matrices of one topology, pattern of offers and set of flow limits.
 
     Attributes
     ----------
+    p_from
+        Coefficients (n_live_branch, n_var) and constants (n_live_branch,) of the active flows at the from ends.
     readout : sparse (n_row, n_var)
         Coefficients of all quantities to read back from a solution, one below the other.
     readout_constant : (n_row,)
@@ -43,21 +45,31 @@ class ConvexModel:
 
     live: LiveNetwork
     template: ProgramTemplate
+    p_from: tuple[sparse.csr_array, FloatArray]
     readout: sparse.csr_array
     readout_constant: FloatArray
     readout_rows: dict[str, slice]
 
     def read(self, x: FloatArray) -> dict[str, FloatArray]:
         """Return the named quantities at a solution."""
-        values = self.readout @ x + self.readout_constant
+        # Variables of flow limits come last and have no part in them.
+        values = self.readout @ x[: self.readout.shape[1]] + self.readout_constant
         return {name: values[rows] for name, rows in self.readout_rows.items()}
 
 
-def convex_model(live: LiveNetwork, builder: ProgramBuilder, quantities: dict[str, Affine]) -> ConvexModel:
-    """Return the finished program, and how to read the named quantities from its solution."""
+def convex_model(
+    live: LiveNetwork, builder: ProgramBuilder, p_from: Affine, quantities: dict[str, Affine]
+) -> ConvexModel:
+    """Return the finished program without flow limits, and how to read the named quantities from its solution."""
     readout, constant, rows = builder.readout(quantities)
+    flows, flows_constant, _ = builder.readout({"p_from": p_from})
     return ConvexModel(
-        live=live, template=builder.build(), readout=readout, readout_constant=constant, readout_rows=rows
+        live=live,
+        template=builder.build(),
+        p_from=(flows, flows_constant),
+        readout=readout,
+        readout_constant=constant,
+        readout_rows=rows,
     )
 
 
@@ -86,8 +98,8 @@ class ConvexDispatch(ABC):
         self.branch_in_service = branch_in_service.copy()
         self.options = options
         self._island: IntArray = network.islands(branch_in_service)
-        self._key: tuple[bytes, ...] = ()
-        self._model: ConvexModel | None = None
+        self._plain: tuple[tuple[bytes, ...], ConvexModel] | None = None
+        self._limited: tuple[tuple[bytes, ...], ConvexModel] | None = None
 
     def solve(
         self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None
@@ -128,8 +140,8 @@ class ConvexDispatch(ABC):
         return model, self._fill(model, inputs, flow_limits)
 
     @abstractmethod
-    def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
-        """Return the matrices for a live network and a pattern of offers."""
+    def _build(self, live: LiveNetwork, inputs: IntervalInputs) -> ConvexModel:
+        """Return the matrices for a live network and a pattern of offers, without flow limits."""
 
     @abstractmethod
     def _fill(self, model: ConvexModel, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConicProgram:
@@ -158,11 +170,17 @@ class ConvexDispatch(ABC):
                 "dispatch was built for; build one formulation per topology"
             )
         bus_live = live_buses(self.network, self._island, inputs)
-        key = (bus_live.tobytes(), *pattern_key(inputs, flow_limits))
-        if self._model is None or key != self._key:
+        key = (bus_live.tobytes(), *pattern_key(inputs))
+        if self._plain is None or key != self._plain[0]:
             live = live_network(self.network, self.branch_in_service, self._island, bus_live)
-            self._model, self._key = self._build(live, inputs, flow_limits), key
-        return self._model
+            self._plain, self._limited = (key, self._build(live, inputs)), None
+        plain = self._plain[1]
+        weights = flow_limits.weights
+        pattern = (weights.indptr.tobytes(), weights.indices.tobytes(), weights.data.tobytes())
+        if self._limited is None or pattern != self._limited[0]:
+            template = with_flow_limits(plain.template, plain.live, flow_limits, plain.p_from, self.options.penalties)
+            self._limited = pattern, replace(plain, template=template)
+        return self._limited[1]
 
     def _result(
         self,

@@ -25,7 +25,6 @@ from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, ConstraintRows, OperatingPoint
 from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined
 from lmpgap.dispatch.supply import (
-    add_flow_limits,
     add_supply,
     fixed_withdrawal,
     rated_branches,
@@ -66,7 +65,7 @@ class DcDispatch(ConvexDispatch):
     def _extend(self, builder: ProgramBuilder, live: LiveNetwork, inputs: IntervalInputs) -> None:
         """Add what a derived formulation needs besides."""
 
-    def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
+    def _build(self, live: LiveNetwork, inputs: IntervalInputs) -> ConvexModel:
         network, penalties = self.network, self.options.penalties
         builder = ProgramBuilder()
         injection = add_supply(builder, live, inputs, penalties)
@@ -107,9 +106,8 @@ class DcDispatch(ConvexDispatch):
             limited = np.flatnonzero(np.isfinite(limit))
             builder.at_most(name, difference.scaled(sign).take(limited), limit[limited])
 
-        add_flow_limits(builder, live, flow_limits, p_from, penalties)
         self._extend(builder, live, inputs)
-        return convex_model(live, builder, {"flow": flow, "loss": loss, "difference": across})
+        return convex_model(live, builder, p_from, {"flow": flow, "loss": loss, "difference": across})
 
     def _fill(self, model: ConvexModel, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConicProgram:
         live, penalties = model.live, self.options.penalties

@@ -133,6 +133,52 @@ class ProgramTemplate:
             ),
         )
 
+    def with_limits(
+        self, name: str, left: sparse.csr_array, constant: FloatArray, right: FloatArray, *, excess: str | None
+    ) -> ProgramTemplate:
+        """Return the template with one more block of limits ``left @ x + constant <= right`` below the others.
+
+        Everything else keeps its place, so that limits which come and go cost no rebuilding.
+
+        Parameters
+        ----------
+        left : sparse (n_row, n_var)
+            Over this template's variables, or as many of them as it has columns.
+        excess
+            Name of a new block of variables by which each row may give way; ``None`` for hard limits.
+        """
+        program, n_row, n_var = self.program, left.shape[0], self.program.n_var
+        n_more = 0 if excess is None else n_row
+        rows = _widened(left, n_var)
+        if n_more:
+            rows = sparse.csr_array(sparse.hstack([rows, -sparse.eye_array(n_row)], format="csr"))
+        n_all = n_var + n_more
+        variables = dict(self.variables)
+        if excess is not None:
+            variables[excess] = slice(n_var, n_all)
+        place = slice(program.inequality_rhs.size, program.inequality_rhs.size + n_row)
+        extended = program
+        if n_row:
+            extended = replace(
+                program,
+                linear=np.append(program.linear, np.zeros(n_more)),
+                quadratic=np.append(program.quadratic, np.zeros(n_more)),
+                lower=np.append(program.lower, np.zeros(n_more)),
+                upper=np.append(program.upper, np.full(n_more, np.inf)),
+                equality=_widened(program.equality, n_all),
+                inequality=sparse.csr_array(sparse.vstack([_widened(program.inequality, n_all), rows], format="csr")),
+                inequality_rhs=np.append(program.inequality_rhs, right - constant),
+                cone=_widened(program.cone, n_all),
+                workspace={},
+            )
+        return replace(
+            self,
+            program=extended,
+            variables=variables,
+            inequalities={**self.inequalities, name: place},
+            inequality_constant=np.append(self.inequality_constant, constant),
+        )
+
 
 class ProgramBuilder:
     """Collects variables and rows, then stacks them into one `ProgramTemplate`."""
@@ -265,6 +311,13 @@ def _exchanged(
     for name, value in values.items():
         result[slices[name]] = value if constant is None else value - constant[slices[name]]
     return result
+
+
+def _widened(matrix: sparse.csr_array, n_column: int) -> sparse.csr_array:
+    """Return the matrix with empty columns added on the right."""
+    if matrix.shape[1] == n_column:
+        return matrix
+    return sparse.csr_array((matrix.data, matrix.indices, matrix.indptr), shape=(matrix.shape[0], n_column))
 
 
 def _constants(blocks: dict[str, tuple[Affine, FloatArray]]) -> FloatArray:

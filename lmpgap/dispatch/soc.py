@@ -34,7 +34,6 @@ from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, OperatingPoint
 from lmpgap.dispatch.soc_rows import angle_limits, soc_constraints
 from lmpgap.dispatch.supply import (
-    add_flow_limits,
     add_supply,
     fixed_withdrawal,
     placed,
@@ -55,7 +54,7 @@ class SocDispatch(ConvexDispatch):
         self._branches = BranchModel.of(network, branch_in_service)
         self._fit: tuple[LiveNetwork, AngleFit] | None = None
 
-    def _build(self, live: LiveNetwork, inputs: IntervalInputs, flow_limits: FlowLimits) -> ConvexModel:
+    def _build(self, live: LiveNetwork, inputs: IntervalInputs) -> ConvexModel:
         network, penalties = self.network, self.options.penalties
         r, x, half, tap = (
             values[live.branch] for values in (network.r, network.x, 0.5 * network.charging, network.tap)
@@ -114,10 +113,10 @@ class SocDispatch(ConvexDispatch):
             limited, tangent = angle_limits(network, live, name)
             row = across.take(limited) - (u - drop).take(limited).scaled(tangent)
             builder.at_most(f"angle {name}", row.scaled(sign), 0.0)
-        add_flow_limits(builder, live, flow_limits, p_from, penalties)
         return convex_model(
             live,
             builder,
+            p_from,
             {
                 "p_from": p_from,
                 "q_from": q_from,

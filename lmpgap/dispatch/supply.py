@@ -25,16 +25,9 @@ class SupplyResult:
     surplus: FloatArray
 
 
-def pattern_key(inputs: IntervalInputs, flow_limits: FlowLimits) -> tuple[bytes, ...]:
-    """Return what the matrices of a program depend on besides topology and live buses."""
-    weights = flow_limits.weights
-    return (
-        inputs.segments.resource.tobytes(),
-        inputs.bids.bus.tobytes(),
-        weights.indptr.tobytes(),
-        weights.indices.tobytes(),
-        weights.data.tobytes(),
-    )
+def pattern_key(inputs: IntervalInputs) -> tuple[bytes, ...]:
+    """Return what the matrices of a program depend on besides topology, live buses and flow limits."""
+    return inputs.segments.resource.tobytes(), inputs.bids.bus.tobytes()
 
 
 def add_supply(builder: ProgramBuilder, live: LiveNetwork, inputs: IntervalInputs, penalties: Penalties) -> Affine:
@@ -126,18 +119,28 @@ def read_supply(template: ProgramTemplate, live: LiveNetwork, inputs: IntervalIn
     )
 
 
-def add_flow_limits(
-    builder: ProgramBuilder,
+def with_flow_limits(
+    template: ProgramTemplate,
     live: LiveNetwork,
     flow_limits: FlowLimits,
-    p_from: Affine,
+    p_from: tuple[sparse.csr_array, FloatArray],
     penalties: Penalties,
-) -> None:
-    """Add the limits on weighted sums of from-end flows, soft where there is a transmission penalty."""
-    total = p_from.mapped(sparse.csr_array(flow_limits.weights[:, live.branch]))
-    if penalties.transmission is not None:
-        total = total - builder.variable("flow limit excess", flow_limits.n_row, lower=0.0)
-    builder.at_most("flow limit", total, flow_limits.limit)
+) -> ProgramTemplate:
+    """Return the template with the limits on weighted sums of from-end flows, soft at the transmission penalty.
+
+    Parameters
+    ----------
+    p_from
+        Coefficients (n_live_branch, n_var) and constants (n_live_branch,) of the flows.
+    """
+    weights = sparse.csr_array(flow_limits.weights[:, live.branch])
+    return template.with_limits(
+        "flow limit",
+        sparse.csr_array(weights @ p_from[0]),
+        np.asarray(weights @ p_from[1]),
+        flow_limits.limit,
+        excess=None if penalties.transmission is None else "flow limit excess",
+    )
 
 
 def transmission_costs(
