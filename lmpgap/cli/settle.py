@@ -101,7 +101,7 @@ def settle(
             "materiality": read.settings.settlement.materiality if materiality is None else materiality,
         }
     )
-    with terminal_progress() as progress:
+    with folder.writing(), terminal_progress() as progress:
         settlement = settle_run(
             folder,
             read,

@@ -111,7 +111,7 @@ def posted_prices(posted: pd.DataFrame, intervals: pd.DatetimeIndex, nodes: Sequ
     ----------
     posted
         ``interval_start, node, lmp, energy_component, congestion_component, loss_component``, at most one row per
-        interval and node (`latest_versions`), congestion with the sign used here.
+        interval and node (`lmpgap.divergence.posted.order_posted`), congestion with the sign used here.
     """
     at, where = _positions(posted, "node", intervals, nodes)
     shape = (len(intervals), len(nodes))

@@ -31,7 +31,7 @@ SHOWN = 20
 """Findings of one kind that are told one by one; the rest is counted."""
 
 Reprice = Callable[..., RunTables]
-"""`lmpgap.runs.price.price`, or something that behaves like it."""
+"""Solves a scenario into a run folder: takes what `lmpgap.runs.price.price` takes, with ``losses`` as they were recorded."""
 
 
 def settle_again(
@@ -86,7 +86,7 @@ def settle_again(
 
 
 def run_settings(recorded: Mapping[str, Any]) -> dict[str, Any]:
-    """Return the recorded settings of a run as the arguments that `lmpgap.runs.price.price` takes.
+    """Return the recorded settings of a run as arguments of a `Reprice`.
 
     Raises
     ------
@@ -101,8 +101,11 @@ def run_settings(recorded: Mapping[str, Any]) -> dict[str, Any]:
     }
     try:
         return {
-            name: types[name](**value) if name in types else tuple(value) if isinstance(value, list) else value
-            for name, value in recorded.items()
+            "losses": {},
+            **{
+                name: types[name](**value) if name in types else tuple(value) if isinstance(value, list) else value
+                for name, value in recorded.items()
+            },
         }
     except TypeError as error:
         raise DataError(f"the recorded run settings are of another version of lmpgap ({error})") from error

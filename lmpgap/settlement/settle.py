@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any, Protocol
 import pandas as pd
 
 from lmpgap.dispatch.names import FORMULATIONS
+from lmpgap.divergence.posted import order_posted
 from lmpgap.errors import DataError, Fault
 from lmpgap.progress import Progress, silent
 from lmpgap.settlement.aggregate import by_account, by_day, by_reason
@@ -23,7 +24,7 @@ from lmpgap.settlement.positions import (
     gather_positions,
     unsettled_rows,
 )
-from lmpgap.settlement.posted import latest_versions, published_at
+from lmpgap.settlement.posted import published_at
 from lmpgap.settlement.posted_reference import ReferenceEvidence
 from lmpgap.settlement.result import Settlement
 from lmpgap.settlement.rights import by_holder
@@ -102,13 +103,13 @@ def settle(
     _check_inputs(run, scenario)
     tables = scenario.tables
     positions, rights = _of_accounts(tables["positions"], tables["rights"], accounts)
-    posted = latest_versions(tables["posted"])
     prices, solves = run.table("prices"), run.table("solves")
     held = tuple(name for name in FORMULATIONS if (prices["formulation"] == name).any())
-    _check(claim, against, held, posted, positions)
+    _check(claim, against, held, tables["posted"], positions)
 
     basket = NodeBasket.of(tables["buses"], tables["hubs"], scenario.network.buses)
     intervals = pd.DatetimeIndex(scenario.interval_starts)
+    posted = order_posted(tables["posted"], basket.names, intervals).latest
     gathered = gather_positions(positions)
     outside = gathered[~gathered["interval_start"].isin(intervals)]
     involved = intervals if not rights.empty else intervals[intervals.isin(gathered["interval_start"])]

@@ -8,6 +8,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
+from jinja2 import TemplateError
 
 from lmpgap import __version__
 from lmpgap.errors import DataError, LmpgapError, MissingExtraError
@@ -46,6 +47,7 @@ from lmpgap.settlement.recompute import (
 )
 from lmpgap.settlement.result import Settlement
 from lmpgap.settlement.rights import RIGHTS_COLUMNS
+from lmpgap.settlement.settle import RunTables
 from lmpgap.tolerances import DEFAULT_TOLERANCES
 
 if TYPE_CHECKING:
@@ -150,7 +152,7 @@ def verify_exhibit(
                 checks.append(f"{len(exhibit.intervals)} intervals solved and settled again")
         except LmpgapError as error:
             findings.append(Finding(place="recomputation", message=described(error)))
-        except (KeyError, TypeError, ValueError, AttributeError, IndexError) as error:
+        except (KeyError, TypeError, ValueError, AttributeError, IndexError, TemplateError) as error:
             # A statement that was tampered with may hold anything in any place.
             findings.append(
                 Finding(
@@ -349,6 +351,17 @@ def _same_rows(stated: list[dict[str, Any]], again: list[dict[str, Any]], price_
 
 def _default_reprice() -> Reprice:
     # The run stands above the settlement in the house; only this check reaches up to it, and only when it is made.
+    from lmpgap.runs.given_losses import FactorTable
     from lmpgap.runs.price import price
 
-    return price
+    def reprice(scenario: Scenario, run: Path, *, losses: Mapping[str, Any], **arguments: Any) -> RunTables:
+        kind = losses.get("kind", "own")
+        if kind == "frozen":
+            raise DataError(
+                f"the losses of dc-loss were frozen at the operating points of another run ({losses.get('source')}), which "
+                "is not in the exhibit: settle a run without --factors-from to have it verified"
+            )
+        given = FactorTable(scenario) if kind == "table" else None
+        return price(scenario, run, losses=given, **arguments)
+
+    return reprice

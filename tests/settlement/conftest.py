@@ -22,7 +22,7 @@ PLANTED = 0.5
 """What the posted loss component at bus B2 is too high by [$/MWh]."""
 
 HOSTILE = '=HYPERLINK("http://x.invalid","<script>alert(1)</script>")'
-RIGHT_TO_LEFT = "\u05d7\u05e9\u05d1\u05d5\u05df \u202eevil\u202c"
+RIGHT_TO_LEFT = "\u05d7\u05e9\u05d1\u05d5\u05df (\u05d0) 12"
 
 
 @dataclass(frozen=True)

@@ -195,7 +195,7 @@ def test_what_cannot_be_settled_is_kept_and_told() -> None:
         ]
     )
     posted = posted_frame(intervals[:2], BUSES, {"energy": np.array([[40.0]])})
-    posted.loc[posted["interval_start"] == intervals[1], "loss_component"] = np.nan
+    posted.loc[posted["interval_start"] == intervals[1], ["energy_component", "loss_component"]] = np.nan
     world = make_world(BUSES, intervals, positions=positions, posted=posted)
     run = FakeRun(split_frame(intervals, BUSES, "ac", energy=40.0, factor=np.ones(3)), solve_frame(intervals, "ac"))
     settlement = settle(run, world, options=SettlementOptions(posted_reference="scenario"))

@@ -90,7 +90,8 @@ def original(text: str) -> str:
 def to_csv(frame: pd.DataFrame) -> bytes:
     """Return a table as UTF-8 CSV with exact figures and times in ISO 8601 with offset."""
     out = io.StringIO()
-    writer = csv.writer(out, lineterminator="\n")
+    # Lines end as RFC 4180 has it; the writer then quotes a stray carriage return in a name too.
+    writer = csv.writer(out, lineterminator="\r\n")
     writer.writerow(frame.columns)
     writer.writerows(zip(*(_cells(frame[column]) for column in frame.columns), strict=True))
     return out.getvalue().encode("utf-8")
