@@ -21,7 +21,8 @@ from lmpgap.dispatch.ac_interval import (
     interval_vectors,
     start_from,
 )
-from lmpgap.dispatch.ac_model import AcProgram, AcShape
+from lmpgap.dispatch.ac_layout import AcShape
+from lmpgap.dispatch.ac_model import AcProgram
 from lmpgap.dispatch.ac_result import (
     AcDerivatives,
     AcSolution,
@@ -123,6 +124,11 @@ class AcDispatch:
         self._options = options
         self._island = network.islands(self._branch_in_service)
         self._programs: OrderedDict[object, AcProgram] = OrderedDict()
+
+    @property
+    def options(self) -> DispatchOptions:
+        """Penalties and tolerances it was built with."""
+        return self._options
 
     def solve(
         self, inputs: IntervalInputs, flow_limits: FlowLimits, start: DispatchResult | None = None
