@@ -44,7 +44,7 @@ def check_axis(tables: Mapping[str, ColumnTable], settings: ScenarioSettings, lo
         else:
             log.warn(
                 table.file,
-                f"{outside.size:,} of {table.n_row:,} rows are for intervals that have no loads; they are not used",
+                f"{outside.size:,} of {table.n_row:,} rows lie at intervals that have no loads and are not used",
                 column="interval_start",
                 row=int(table.lines(outside[:1])[0]),
                 kind="outside",

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from lmpgap.scenario.faults import FaultLog, as_rows, listing
+from lmpgap.scenario.faults import FaultLog, as_rows, listing, rows_in_words
 from lmpgap.scenario.intervals import IntervalSource, start_label
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.typed import ColumnTable
@@ -159,7 +159,7 @@ def _check_lowered_minimum(tables: Mapping[str, ColumnTable], log: FaultLog) -> 
         names = list(dict.fromkeys(name.at(int(row)) for row in rows[:1000]))
         log.warn(
             availability.file,
-            f"{rows.size:,} rows put eco_max_mw below the resource's eco_min_mw, which is lowered with it: "
+            f"eco_max_mw is below the resource's eco_min_mw, which is lowered with it, in {rows_in_words(rows.size)}: "
             f"{listing(names)}; state eco_min_mw, or use outages, if something else is meant",
             row=int(availability.lines(rows[:1])[0]),
             column="eco_max_mw",
@@ -174,8 +174,8 @@ def _check_load(loads: ColumnTable, source: IntervalSource, settings: ScenarioSe
         if none.size:
             log.warn(
                 loads.file,
-                f"{none.size:,} intervals have no load to weight the reference by, first the one that starts "
-                f"{start_label(source.starts[none[0]])}; all buses weigh the same there",
+                f"no load to weight the reference by in {none.size:,} of {totals.size:,} intervals, first in the one "
+                f"that starts {start_label(source.starts[none[0]])}; all buses weigh the same there",
                 column="mw",
                 kind="no load",
             )

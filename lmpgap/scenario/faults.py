@@ -146,3 +146,8 @@ def listing(names: Sequence[str], limit: int = 5, total: int | None = None) -> s
 def as_rows(mask: np.ndarray[tuple[int], np.dtype[np.bool_]]) -> IntArray:
     """Return the positions where the mask is true."""
     return np.flatnonzero(mask).astype(np.int64)
+
+
+def rows_in_words(count: int) -> str:
+    """Return ``1 row`` or ``2,345 rows``."""
+    return "1 row" if count == 1 else f"{count:,} rows"

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 
 import numpy as np
 
-from lmpgap.scenario.faults import SUGGESTED_VALUES, FaultLog, as_rows, clip_text, suggestion
+from lmpgap.scenario.faults import SUGGESTED_VALUES, FaultLog, as_rows, clip_text, rows_in_words, suggestion
 from lmpgap.scenario.network import BoolArray, IntArray
 from lmpgap.scenario.settings import ScenarioSettings
 from lmpgap.scenario.tables import TABLES
@@ -155,7 +155,7 @@ def _report_unknown(
             "unknown name",
             np.sort(rows[first]),
             table.lines,
-            lambda row: f"{message(row)} (kept; {count[text.codes[row]]:,} rows)",
+            lambda row: f"{message(row)} (kept; {rows_in_words(count[text.codes[row]])})",
             column=name,
             value=text.at,
             warning=True,

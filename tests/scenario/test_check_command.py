@@ -46,7 +46,7 @@ def test_what_would_be_solved(tmp_path: Path) -> None:
         "  money        0 position rows of 0 accounts, 0 rights, 1 hub",
         "",
         "1 warning:",
-        "  - posted.csv, line 3, column node: is not in buses or hubs (kept; 1 rows) (found 'Elsewhere')",
+        "  - posted.csv, line 3, column node: is not in buses or hubs (kept; 1 row) (found 'Elsewhere')",
         "",
         f"no faults; next: lmpgap weekly {tmp_path}",
     ]

@@ -255,7 +255,7 @@ def test_an_interval_without_load_has_equal_weights_and_a_warning(tmp_path: Path
     changes = {"loads.csv": f"bus,interval_start,mw\nSouth,{HOURS[0]},5\nSouth,{HOURS[1]},0\n"}
     scenario = read(tmp_path, changes)
     np.testing.assert_allclose(scenario.reference_weights(1), [1 / 3] * 3)
-    assert "1 intervals have no load to weight the reference by" in str(scenario.warnings[0])
+    assert "no load to weight the reference by in 1 of 2 intervals" in str(scenario.warnings[0])
 
 
 def test_without_offers_there_is_a_warning(tmp_path: Path) -> None:

@@ -73,7 +73,7 @@ def test_unknown_nodes_are_kept_and_told_once_per_name(tmp_path: Path) -> None:
     }
     assert warnings(tmp_path, changes) == [
         "positions.csv, line 2, column node: is not in buses or hubs; did you mean 'North'? (kept; 3 rows) (found 'Nort')",
-        "positions.csv, line 5, column node: is not in buses or hubs (kept; 1 rows) (found 'Hub')",
+        "positions.csv, line 5, column node: is not in buses or hubs (kept; 1 row) (found 'Hub')",
     ]
 
 

@@ -66,7 +66,7 @@ def test_own_column_names_and_signs(tmp_path: Path) -> None:
     assert scenario.tables["posted_constraints"]["shadow_price"].tolist() == [7.5]
     assert [str(w) for w in scenario.warnings] == [
         "posted.csv: columns that [posted.columns] does not map are not read: Region",
-        "posted.csv, line 3, column node: is not in buses or hubs (kept; 1 rows) (found 'Gone')",
+        "posted.csv, line 3, column node: is not in buses or hubs (kept; 1 row) (found 'Gone')",
     ]
 
 

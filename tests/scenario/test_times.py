@@ -120,8 +120,8 @@ def test_missing_rows_of_a_bus_are_a_warning(tmp_path: Path) -> None:
 def test_rows_beside_the_axis_are_a_warning(tmp_path: Path) -> None:
     text = "interval_start,resource,eco_max_mw\n2026-03-08T05:00Z,Gas,10\n2026-03-08T06:00Z,Gas,10\n"
     assert warnings(tmp_path, {"availability.csv": text}) == [
-        "availability.csv, line 2, column interval_start: 1 of 2 rows are for intervals that have no loads; they are "
-        "not used"
+        "availability.csv, line 2, column interval_start: 1 of 2 rows lie at intervals that have no loads and "
+        "are not used"
     ]
 
 
