@@ -16,6 +16,7 @@ from scipy import sparse
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, stationarity, without_solution
 from lmpgap.dispatch.result import SolveStatus
+from lmpgap.dispatch.sparse_rows import ScaledRows, stacked_rows
 from lmpgap.scenario.network import BoolArray, FloatArray
 from lmpgap.tolerances import Tolerances
 
@@ -179,12 +180,21 @@ def _stack(program: ConicProgram, fixed: BoolArray) -> _Stacked:
     upper = free & np.isfinite(program.upper)
 
     def matrices() -> tuple[sparse.csc_matrix, BoolArray]:
-        equality, inequality, cone = (block[:, free] if fixed.any() else block for block in program.blocks)
+        equality, inequality, cone = program.blocks
         # An equation whose variables are all fixed is either true or a contradiction; the solver needs neither.
-        keep = np.diff(equality.indptr) > 0
-        identity = sparse.eye_array(int(free.sum()), format="csr")
-        parts = [equality[keep], inequality, -identity[lower[free]], identity[upper[free]], cone]
-        return sparse.csc_matrix(sparse.vstack(parts, format="csc")), keep
+        row = np.repeat(np.arange(equality.shape[0]), np.diff(equality.indptr))
+        keep = np.bincount(row[free[equality.indices]], minlength=equality.shape[0]) > 0
+        stacked = stacked_rows(
+            [
+                ScaledRows(equality, np.flatnonzero(keep), 1.0),
+                ScaledRows(inequality, np.arange(inequality.shape[0]), 1.0),
+                ScaledRows(None, np.flatnonzero(lower), -1.0),
+                ScaledRows(None, np.flatnonzero(upper), 1.0),
+                ScaledRows(cone, np.arange(cone.shape[0]), 1.0),
+            ],
+            program.n_var,
+        ).tocsc()
+        return sparse.csc_matrix(stacked[:, np.flatnonzero(free)] if fixed.any() else stacked), keep
 
     key = (fixed.tobytes(), lower.tobytes(), upper.tobytes())
     a, keep = program.derived("clarabel", key, matrices)
