@@ -149,8 +149,28 @@ def _resolve_times(
         column.take(keep) if isinstance(column, TextColumn) else column[keep] for column in raw.columns
     ]
     columns[index] = resolved.times[keep]
+    published = own.get("published_at", "published_at")
+    if settings.posted.local and published in raw.names:
+        place = raw.names.index(published)
+        columns[place] = _local_instants(columns[place], settings.time_zone)
     lines = raw.lines
     return replace(raw, columns=tuple(columns), lines=lambda rows: lines(keep[rows]))
+
+
+def _local_instants(column: RawColumn, zone: str) -> RawColumn:
+    """Return clock times as instants; what is no time stays as it is, for reading to report it."""
+    labels = as_text(column)
+    rule = ClockRule(zone=zone, hour_ending=False, interval_minutes=0)
+    # Each row is a series of its own: equal times of publication are not two different hours.
+    resolved = resolve(labels, np.arange(len(labels)), rule)
+    if not np.any(resolved.unreadable & ~labels.is_value("")):
+        return resolved.times
+    return TextColumn.of(
+        [
+            text if np.isnat(time) else f"{time}+00:00"
+            for text, time in zip(labels.tolist(), resolved.times, strict=True)
+        ]
+    )
 
 
 def _has_offset(value: str) -> bool:

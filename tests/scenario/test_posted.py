@@ -202,6 +202,20 @@ def test_versions_do_not_count_as_repeated_hours(tmp_path: Path) -> None:
     assert times(scenario) == starts * 2
 
 
+def test_local_times_of_publication(tmp_path: Path) -> None:
+    text = (
+        "interval_start,node,lmp,published_at\n2026-06-01T00:00,North,1,2026-06-02T09:30\n"
+        "2026-06-01T00:00,East,1,2026-06-02T09:30\n2026-06-01T01:00,North,1,\n2026-06-01T02:00,North,1,2026-06-02T09:30Z\n"
+    )
+    frame = posted(tmp_path / "good", text, "local = true").tables["posted"]
+    morning = pd.Timestamp("2026-06-02T09:30-06:00")
+    assert frame["published_at"].tolist() == [morning, morning, pd.NaT, pd.Timestamp("2026-06-02T09:30Z")]
+    changes = {"scenario.toml": settings("local = true"), "posted.csv": text.replace("09:30Z", "morning")}
+    found = faults(tmp_path / "bad", changes)
+    assert len(found) == 1
+    assert found[0].startswith("posted.csv, line 5, column published_at: is not a time (found '2026-06-02Tmorning')")
+
+
 def test_date_and_hour_in_two_columns(tmp_path: Path) -> None:
     rows = [label.split(" ") for label in local_labels("2026-11-01", "HE")]
     text = "Day,Hour,node,lmp\n" + "".join(f"{date},{hour},North,1\n" for date, hour in rows)
