@@ -25,6 +25,7 @@ from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
+from lmpgap.scenario.settings import Penalties
 
 MOVEMENT_FACTOR = 10.0
 """Price of a MW moved, as a multiple of the spread of offers and bids. Moving a MW from the cheapest to the dearest
@@ -113,7 +114,8 @@ def repair_dispatch(
     start
         Where to start where the optimum has to be solved here: best the cone solution of the interval.
     movement_price
-        Price of each MW moved [$/MWh]; by default `MOVEMENT_FACTOR` times the spread of offers and bids.
+        Price of each MW moved [$/MWh]; by default `MOVEMENT_FACTOR` times the spread of offers and bids, and at most
+        the smallest penalty divided by the same factor.
 
     Returns
     -------
@@ -131,7 +133,7 @@ def repair_dispatch(
         )
     if optimum is None:
         optimum = dispatch.solve(inputs, flow_limits, start)
-    price = _movement_price(inputs) if movement_price is None else movement_price
+    price = _movement_price(inputs, dispatch.options.penalties) if movement_price is None else movement_price
     nearest = dispatch.solve_near(
         inputs,
         flow_limits,
@@ -147,7 +149,7 @@ def repair_dispatch(
     )
 
 
-def _movement_price(inputs: IntervalInputs) -> float:
+def _movement_price(inputs: IntervalInputs, penalties: Penalties) -> float:
     wide = inputs.segments.width > 0.0
     prices = np.concatenate(
         [
@@ -157,7 +159,9 @@ def _movement_price(inputs: IntervalInputs) -> float:
         ]
     )
     spread = float(np.ptp(prices)) if prices.size else 0.0
-    return MOVEMENT_FACTOR * max(spread, 1.0)
+    # Far below every penalty: otherwise load would be shed, or a line overloaded, rather than an output moved.
+    least = min((p for p in (penalties.power_balance, penalties.transmission) if p is not None), default=np.inf)
+    return min(MOVEMENT_FACTOR * max(spread, 1.0), float(least) / MOVEMENT_FACTOR)
 
 
 def _seen_from(network: Network, linear: DispatchResult, ac: DispatchResult) -> Redispatch:

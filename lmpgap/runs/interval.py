@@ -22,6 +22,7 @@ from lmpgap.prices.certificate import certify
 from lmpgap.prices.components import PriceSplit, constraints_of, split_prices
 from lmpgap.prices.money import money_balance
 from lmpgap.prices.uniqueness import price_intervals
+from lmpgap.runs.audit import AUDITED, AuditRow, audit_rows
 from lmpgap.runs.fingerprint import fingerprint
 from lmpgap.runs.given_losses import GivenLosses
 from lmpgap.runs.plan import PlannedInterval, RunSettings
@@ -93,9 +94,34 @@ def solve_interval(
         start = results["soc"][0] if name == "ac" else None
         results[name] = _solve(space, name, planned, start)
     ac = results["ac"][0] if "ac" in results else None
-    return [
+    solved = [
         _priced(space, planned, name, *results[name], ac=ac, settings=settings, hours=hours) for name in planned.keys
     ]
+    if not settings.audit:
+        return solved
+    return [
+        replace(item, audit=_audited(space, planned, results, settings)) if item.formulation == "ac" else item
+        for item in solved
+    ]
+
+
+def _audited(
+    space: Workspace,
+    planned: PlannedInterval,
+    results: dict[str, tuple[DispatchResult, FlowLimits]],
+    settings: RunSettings,
+) -> tuple[tuple[str, AuditRow], ...]:
+    """Return the audit of the linear dispatches, which are solved for it where they are not in the run."""
+    optimum, limits = results["ac"]
+    rows: list[tuple[str, AuditRow]] = []
+    for name in AUDITED:
+        linear = (results[name] if name in results else _solve(space, name, planned, None))[0]
+        if not (linear.status.has_solution and optimum.status.has_solution):
+            continue
+        repairer = space.formulation("ac") if name in settings.repaired else None
+        found = audit_rows(space.network, planned.inputs, linear, limits, optimum, repairer)
+        rows += [(name, row) for row in found]
+    return tuple(rows)
 
 
 def _solve(

@@ -37,6 +37,10 @@ class RunSettings:
         How many sources of the reactive component to list by bus; the rest is gathered in one row.
     losses
         Where the losses of ``dc-loss`` come from.
+    audit
+        Put the linear dispatches on the AC grid in every interval that ``ac`` is solved for.
+    repaired
+        Formulations whose dispatch is also repaired: the nearest AC-feasible redispatch takes an AC solve each.
     """
 
     reference: Reference = field(default_factory=Reference)
@@ -46,6 +50,8 @@ class RunSettings:
     uniqueness: bool = True
     reactive_sources: int = 8
     losses: LossSetting = field(default_factory=LossSetting)
+    audit: bool = True
+    repaired: tuple[str, ...] = ("dc-loss",)
 
     @staticmethod
     def of(scenario: Scenario, **changes: Any) -> RunSettings:

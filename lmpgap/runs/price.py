@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 import platform
 import warnings
@@ -128,7 +129,8 @@ def _manifest(folder: RunFolder, plan: Plan) -> dict[str, Any]:
 
 def _plain(settings: dict[str, Any]) -> dict[str, Any]:
     """Return the settings as they come back from JSON, so that both sides of a comparison look alike."""
-    return {key: _plain(value) if isinstance(value, dict) else value for key, value in settings.items()}
+    plain: dict[str, Any] = json.loads(json.dumps(settings))
+    return plain
 
 
 def _wanted(folder: RunFolder, plan: Plan) -> dict[int, tuple[str, ...]]:
@@ -172,16 +174,18 @@ def _drop_stale(folder: RunFolder, ledger: Mapping[str, Mapping[str, str]], vali
             folder.commit(chunk, remove=files)
             continue
         tables = {
-            f"{table}/{chunk}.parquet": _without(pq.read_table(folder.path / table / f"{chunk}.parquet"), stale)
+            f"{table}/{chunk}.parquet": _without(pq.read_table(folder.path / table / f"{chunk}.parquet"), stale, table)
             for table in SOLVED_TABLES
         }
         folder.commit(chunk, tables=tables, texts={f"ledger/{chunk}.json": _ledger_text(kept)})
 
 
-def _without(table: pa.Table, stale: set[str]) -> pa.Table:
+def _without(table: pa.Table, stale: set[str], name: str) -> pa.Table:
+    """Return the rows of the solves that still hold; the audit belongs to the AC solve, whatever it looked at."""
     # Cast first: at a finer unit %S would print the fraction as well.
     times = pc.strftime(table["interval_start"].cast(pa.timestamp("s", tz="UTC")), format="%Y-%m-%dT%H:%M:%SZ")
-    names = pc.binary_join_element_wise(times, table["formulation"], "|")
+    owner = pa.scalar("ac") if name == "audit" else table["formulation"]
+    names = pc.binary_join_element_wise(times, owner, "|")
     return table.filter(pc.invert(pc.is_in(names, value_set=pa.array(sorted(stale), type=pa.string()))))
 
 
@@ -196,8 +200,6 @@ def _store(folder: RunFolder, plan: Plan, chunk: list[PlannedInterval], tables: 
 
 
 def _ledger_text(entries: Mapping[str, str]) -> str:
-    import json
-
     return json.dumps(dict(entries), indent=0, sort_keys=True) + "\n"
 
 

@@ -13,6 +13,7 @@ from lmpgap.prices.certificate import Certificate
 from lmpgap.prices.components import OTHER_SOURCES, PriceSplit
 from lmpgap.prices.keys import KeyedConstraints
 from lmpgap.runs.assemble import Columns, Labels, assemble
+from lmpgap.runs.audit import AuditRow
 from lmpgap.runs.schema import RUN_TABLES, SOLVED_TABLES
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 
@@ -32,6 +33,7 @@ class SolvedInterval:
     certificate: Certificate
     money: tuple[tuple[str, str, float], ...]
     power_balance_penalty: float
+    audit: tuple[tuple[str, AuditRow], ...] = ()
 
 
 def chunk_tables(network: Network, solved: Sequence[SolvedInterval]) -> dict[str, pa.Table]:
@@ -43,7 +45,8 @@ def chunk_tables(network: Network, solved: Sequence[SolvedInterval]) -> dict[str
 
 
 def _keyed(item: SolvedInterval, columns: Columns) -> Columns:
-    return {**columns, "interval_start": item.start, "formulation": item.formulation}
+    # The audit names the formulation it looked at; every other table that of the solve.
+    return {"formulation": item.formulation, **columns, "interval_start": item.start}
 
 
 def _prices(network: Network, item: SolvedInterval) -> Columns:
@@ -175,6 +178,18 @@ def _money(network: Network, item: SolvedInterval) -> Columns:
     }
 
 
+def _audit(network: Network, item: SolvedInterval) -> Columns:
+    rows = [row for _, row in item.audit]
+    return {
+        "formulation": [name for name, _ in item.audit],
+        "finding": [row.finding for row in rows],
+        "element": [row.element for row in rows],
+        "value": np.array([row.value for row in rows], dtype=float),
+        "limit": np.array([row.limit for row in rows], dtype=float),
+        "unit": [row.unit for row in rows],
+    }
+
+
 def _none(table: str) -> Columns:
     return dict.fromkeys((c.name for c in RUN_TABLES[table].columns[2:]), np.zeros(0, dtype=object))
 
@@ -191,4 +206,5 @@ _ROWS: dict[str, Callable[[Network, SolvedInterval], Columns]] = {
     "flows": _flows,
     "solves": _solves,
     "money": _money,
+    "audit": _audit,
 }

@@ -277,7 +277,7 @@ RUN_TABLES: dict[str, RunTable] = {
                         "finding",
                         "text",
                         "",
-                        "missing-power, overload, voltage, angle, reactive, redispatch, repair-cost",
+                        "what was found, see `lmpgap.runs.audit`",
                     ),
                     ("element", "text", "", "branch, bus or resource; empty for the system"),
                     ("value", "number", "unit", ""),
@@ -319,6 +319,7 @@ SOLVED_TABLES = (
     "flows",
     "solves",
     "money",
+    "audit",
 )
 """Written by the solves, chunk by chunk; all other tables are derived and written whole."""
 

@@ -80,6 +80,28 @@ def test_every_interval_and_formulation_is_there_and_certified(scenario: Path, t
     assert (summary["usable"] == 6).all()
 
 
+def test_the_audit_says_what_the_linear_dispatch_leaves_missing(scenario: Path, tmp_path: Path) -> None:
+    """Common practice (no source): lossless generation equals load, so an AC grid lacks the losses, roughly."""
+    folder = price(read_scenario(scenario), tmp_path / "run")
+    audit, solves = folder.table("audit"), folder.table("solves")
+    found = audit.pivot_table(index=["formulation", "interval_start"], columns="finding", values="value")
+    missing = found["missing-power"]
+    losses = solves.set_index(["formulation", "interval_start"])["losses_mw"]
+    assert len(missing) == 12
+    assert (missing["dc"] > 0.9 * losses["ac"]).all()
+    assert (missing["dc-loss"].abs() < 0.2 * missing["dc"]).all()
+    assert (found.loc["dc-loss", "repair-cost"] > -1e-3).all()
+    assert found.loc["dc", "repair-cost"].isna().all(), "only dc-loss is repaired by default"
+
+
+def test_the_audit_follows_the_ac_solve(scenario: Path, tmp_path: Path) -> None:
+    """A revised hour takes its audit with it, and the other hours keep theirs."""
+    price(read_scenario(scenario), tmp_path / "run")
+    change_load(scenario, hour=3, factor=1.05)
+    revised = price(read_scenario(scenario), tmp_path / "run")
+    assert_same(revised, price(read_scenario(scenario), tmp_path / "fresh"))
+
+
 def test_money_balances_in_every_interval(scenario: Path, tmp_path: Path) -> None:
     money = price(read_scenario(scenario), tmp_path / "run").table("money")
     amounts = money.set_index(["interval_start", "formulation", "basis", "item"])["amount"].unstack("item")
@@ -119,13 +141,15 @@ def test_money_side_inputs_never_cause_a_solve(scenario: Path, tmp_path: Path, c
 
 def test_a_formulation_can_be_added(scenario: Path, tmp_path: Path, count_solves: list[str]) -> None:
     """The verdict on the relaxation needs the AC solution: adding `ac` judges `soc` anew, and leaves `dc` alone."""
-    early = price(read_scenario(scenario), tmp_path / "run", formulations=("dc", "soc"))
+    early = price(read_scenario(scenario), tmp_path / "run", formulations=("dc", "soc"), audit=False)
     assert set(early.table("solves", formulation="soc")["verdict"]) == {"not verified"}
     count_solves.clear()
-    later = price(read_scenario(scenario), tmp_path / "run", formulations=("ac",))
+    later = price(read_scenario(scenario), tmp_path / "run", formulations=("ac",), audit=False)
     assert set(count_solves) == {"soc", "ac"}
     assert "not verified" not in set(later.table("solves")["verdict"])
-    assert_same(later, price(read_scenario(scenario), tmp_path / "fresh", formulations=("dc", "soc", "ac")))
+    assert_same(
+        later, price(read_scenario(scenario), tmp_path / "fresh", formulations=("dc", "soc", "ac"), audit=False)
+    )
 
 
 def test_the_ac_result_does_not_depend_on_its_company(scenario: Path, tmp_path: Path) -> None:
