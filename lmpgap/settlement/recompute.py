@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 import tempfile
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -16,11 +16,13 @@ from lmpgap.errors import DataError, LmpgapError
 from lmpgap.progress import Progress, silent
 from lmpgap.scenario.network import FloatArray
 from lmpgap.scenario.settings import DcConvention, Penalties, Reference
-from lmpgap.settlement.aggregate import by_account
+from lmpgap.settlement.aggregate import by_account, by_reason
 from lmpgap.settlement.exhibit.manifest import Finding
+from lmpgap.settlement.exhibit.statement import plain_rows
 from lmpgap.settlement.options import SettlementOptions
 from lmpgap.settlement.positions import COUNTED, combined_interval
 from lmpgap.settlement.result import Settlement
+from lmpgap.settlement.rights import by_holder
 from lmpgap.settlement.settle import RunTables, settle
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
@@ -31,7 +33,7 @@ SHOWN = 20
 """Findings of one kind that are told one by one; the rest is counted."""
 
 Reprice = Callable[..., RunTables]
-"""Solves a scenario into a run folder: takes what `lmpgap.runs.price.price` takes, with ``losses`` as they were recorded."""
+"""Solves a scenario into a run folder: takes what `lmpgap.runs.price.price` takes, ``losses`` as they were recorded."""
 
 
 def settle_again(
@@ -126,13 +128,13 @@ def unusual_settings(statement: Mapping[str, Any]) -> list[str]:
     return lines
 
 
-def added_up(rows: pd.DataFrame, statement: Mapping[str, Any]) -> list[Finding]:
+def added_up(rows: pd.DataFrame, rights: pd.DataFrame, statement: Mapping[str, Any]) -> list[Finding]:
     """Add up the rows of an exhibit independently of any solve: amounts, intervals and totals.
 
     Parameters
     ----------
-    rows
-        As settlement rows.
+    rows, rights
+        As a settlement has them.
     """
     cent = 1e-6
     findings: list[Finding] = []
@@ -144,6 +146,14 @@ def added_up(rows: pd.DataFrame, statement: Mapping[str, Any]) -> list[Finding]:
         values = np.asarray(values, dtype=float)
         wrong = ~(np.abs(stated - values) <= cent * (1.0 + np.abs(values)))
         findings += _line_findings(counted.index[wrong], column, stated[wrong], values[wrong])
+    findings += [
+        Finding(place=f"statement.json, {name}", message=f"is not the sum of {file}: {difference}")
+        for name, file, again in (
+            ("holders", "rights.csv", by_holder(rights)),
+            ("left_out", "rows.csv", by_reason(rows)),
+        )
+        if (difference := first_difference(statement[name], plain_rows(again), cent))
+    ]
     totals = by_account(rows, float(statement["options"]["materiality"]))
     findings += compare_tables(
         pd.DataFrame(statement["totals"], columns=totals.columns),
@@ -254,6 +264,30 @@ def compare_tables(
     extra = [name for name in stated.columns if name not in again.columns]
     findings += [Finding(place=place, message=f"has a column {name} that does not belong there") for name in extra]
     return findings
+
+
+def first_difference(stated: Any, again: Any, allowed: float) -> str:
+    """Return the first place in which two nested plain values differ, in words; empty where they agree.
+
+    Parameters
+    ----------
+    allowed
+        Relative and absolute difference of figures that counts as none.
+    """
+    if isinstance(again, Mapping) and isinstance(stated, Mapping) and stated.keys() == again.keys():
+        pairs: Iterable[tuple[Any, Any, Any]] = ((key, stated[key], again[key]) for key in again)
+    elif isinstance(again, list) and isinstance(stated, list) and len(stated) == len(again):
+        pairs = ((number + 1, one, other) for number, (one, other) in enumerate(zip(stated, again, strict=True)))
+    elif isinstance(again, float) and isinstance(stated, (int, float)) and not isinstance(stated, bool):
+        return "" if abs(stated - again) <= allowed * (1.0 + abs(again)) else f"{stated:,.6g}, recomputed {again:,.6g}"
+    else:
+        same = type(stated) is type(again) and stated == again
+        return "" if same else f"{_shown(stated)}, recomputed {_shown(again)}"
+    for key, one, other in pairs:
+        difference = first_difference(one, other, allowed)
+        if difference:
+            return f"{key}: {difference}"
+    return ""
 
 
 def _listed(rows: pd.DataFrame, keys: list[str], place: str, message: str) -> list[Finding]:

@@ -25,7 +25,8 @@ from tests.settlement.world import (
 )
 
 BUSES = tuple(f"N{i}" for i in range(12))
-WEEK = hourly("2026-03-02", 48)
+HOURS = 24
+WEEK = hourly("2026-03-02", HOURS)
 
 
 def known_world(seed: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -115,7 +116,7 @@ def test_nothing_is_claimed_without_a_fault() -> None:
     assert not settlement.accounts["material"].any()
 
 
-@settings(max_examples=12, deadline=None)
+@settings(max_examples=8, deadline=None)
 @given(seed=st.integers(0, 10_000), reference=st.sampled_from(["scenario", "unknown"]))
 def test_rounding_interval_holds_the_unrounded_amount(seed: int, reference: str) -> None:
     """Every row's interval must hold what the amount would be without rounding, in every component."""
@@ -144,7 +145,7 @@ def test_rounding_interval_holds_the_unrounded_amount(seed: int, reference: str)
     assert (exact["amount"] <= rounded["amount_high"] + slack).all()
 
 
-@settings(max_examples=10, deadline=None)
+@settings(max_examples=6, deadline=None)
 @given(seed=st.integers(0, 10_000))
 def test_claim_does_not_depend_on_the_posted_reference(seed: int) -> None:
     """The same posted prices on any other reference give the same claim once both sides are moved to one."""
@@ -277,14 +278,14 @@ def test_root_sum_square_is_narrower_than_worst_case() -> None:
 
 
 def test_independent_rounding_grows_with_the_root_of_the_hours() -> None:
-    """48 equal hours: worst case 48 half widths, independent rounding the root of 48 of them."""
+    """24 equal hours: worst case 24 half widths, independent rounding the root of 24 of them."""
     posted = posted_frame(WEEK, ("A", "B"), {"energy": np.array([[40.0]]), "loss": np.array([[0.0, 1.0]])})
     world = make_world(("A", "B"), WEEK, positions=position_frame([("a", s, "B", 100.0) for s in WEEK]), posted=posted)
     run = FakeRun(split_frame(WEEK, ("A", "B"), "ac", energy=40.0, factor=np.ones(2)), solve_frame(WEEK, "ac"))
     by = settle(run, world, options=SettlementOptions(posted_reference="scenario")).accounts.set_index("component")
     claim = by.loc["loss"]
-    assert claim["amount_high"] - claim["amount"] == pytest.approx(48 * 0.5)
-    assert claim["independent_high"] - claim["amount"] == pytest.approx(np.sqrt(48) * 0.5)
+    assert claim["amount_high"] - claim["amount"] == pytest.approx(HOURS * 0.5)
+    assert claim["independent_high"] - claim["amount"] == pytest.approx(np.sqrt(HOURS) * 0.5)
 
 
 @pytest.mark.parametrize(("materiality", "material"), [(99.0, True), (100.0, False), (150.0, False)])

@@ -11,11 +11,13 @@ import math
 from collections.abc import Mapping, Sequence
 from datetime import date, datetime
 from importlib.metadata import version
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
 
 from lmpgap import __version__
+from lmpgap.settlement.exhibit.inputs import SETTLEMENT_FILES
 from lmpgap.settlement.positions import COUNTED
 from lmpgap.settlement.result import Settlement
 from lmpgap.settlement.settle import RunTables
@@ -58,11 +60,35 @@ def build_statement(
     filtered
         Those of them that were reduced to the accounts.
     """
-    settings = scenario.settings
-    rows = settlement.rows
     manifest = run.manifest
-    whole = len(included) > 0 and set(scenario.hashes) <= {*included, *filtered}
-    contents = "the network, offers and loads of the scenario" if whole else "no network, offers or loads"
+    return {
+        "claim": settlement.claim,
+        "against": settlement.against,
+        "accounts": None if accounts is None else list(accounts),
+        "options": settlement.options.as_dict(),
+        "today": None if settlement.today is None else settlement.today.isoformat(),
+        "written_at": written_at.isoformat(timespec="seconds"),
+        "totals": plain_rows(settlement.accounts),
+        "baselines": plain_rows(settlement.baselines),
+        "certificate": certificate_summary(solves),
+        "run_settings": manifest.get("settings", {}),
+        "versions": {**manifest.get("versions", {}), "lmpgap": __version__, "jinja2": version("jinja2")},
+        "inputs": dict(scenario.hashes),
+        "included": list(included),
+        "filtered": list(filtered),
+        **recomputable(settlement, scenario, included),
+    }
+
+
+def recomputable(settlement: Settlement, scenario: Scenario, included: Sequence[str]) -> dict[str, Any]:
+    """Return what of a statement follows from the settlement, the scenario and the files that are included."""
+    settings = scenario.settings
+    starts = settlement.rows["interval_start"]
+    has_network = any(Path(name).stem not in SETTLEMENT_FILES for name in included)
+    contents = "the network, offers and loads of the scenario" if has_network else "no network, offers or loads"
+    reference = settlement.reference.groupby("reference", as_index=False).agg(
+        intervals=("coverage", "size"), coverage=("coverage", "min")
+    )
     return {
         "scenario": {
             "name": settings.name,
@@ -73,34 +99,16 @@ def build_statement(
             "susceptance": settings.dc.susceptance,
             "taps": settings.dc.taps,
         },
-        "claim": settlement.claim,
-        "against": settlement.against,
-        "accounts": None if accounts is None else list(accounts),
         "formulations": list(settlement.formulations),
-        "options": settlement.options.as_dict(),
-        "today": None if settlement.today is None else settlement.today.isoformat(),
-        "written_at": written_at.isoformat(timespec="seconds"),
-        "first_interval": rows["interval_start"].min().isoformat(),
-        "last_interval": rows["interval_start"].max().isoformat(),
-        "intervals": int(rows["interval_start"].nunique()),
-        "totals": plain_rows(settlement.accounts),
-        "baselines": plain_rows(settlement.baselines),
+        "first_interval": starts.min().isoformat(),
+        "last_interval": starts.max().isoformat(),
+        "intervals": int(starts.nunique()),
         "left_out": plain_rows(settlement.left_out),
         "holders": plain_rows(settlement.holders),
         "deadlines": plain_rows(settlement.deadlines),
         "rule": None if settlement.rule is None else settlement.rule.sentence,
-        "reference": plain_rows(
-            settlement.reference.groupby("reference", as_index=False).agg(
-                intervals=("coverage", "size"), coverage=("coverage", "min")
-            )
-        ),
+        "reference": plain_rows(reference),
         "notes": list(settlement.notes),
-        "certificate": certificate_summary(solves),
-        "run_settings": manifest.get("settings", {}),
-        "versions": {**manifest.get("versions", {}), "lmpgap": __version__, "jinja2": version("jinja2")},
-        "inputs": dict(scenario.hashes),
-        "included": list(included),
-        "filtered": list(filtered),
         "cautions": [text.format(contents=contents) for text in CAUTIONS],
     }
 
