@@ -11,7 +11,7 @@ from lmpgap.dispatch.limits import FlowLimits, interface_limits
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import OperatingPoint, constraint_name
 from lmpgap.divergence.shift_factors import AngleResponse
-from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
 
 CONTINGENCY_LOADING = 0.8
 """Contingency pairs below this share of their emergency rating after the outage are no candidates [-]: they are many,
@@ -26,8 +26,10 @@ class Candidates:
     ----------
     kind, contingency, monitored : (n_candidate,)
         Key without the direction.
-    column : (n_candidate, n_bus)
-        Congestion per unit of shadow price of the forward direction; minus it is that of the reverse [-].
+    gain : sparse (n_candidate, n_branch)
+        Derivative of the forward flow with respect to the branch angles [pu/rad].
+    response : AngleResponse
+        Angle system of the interval.
     reverse_scale : (n_candidate,)
         Shadow price of the forward direction that has the effect of one unit in the reverse direction [-]; not
         exactly one where the ends of a branch differ.
@@ -40,7 +42,8 @@ class Candidates:
     kind: tuple[str, ...]
     contingency: tuple[str, ...]
     monitored: tuple[str, ...]
-    column: FloatArray
+    gain: sparse.csr_array
+    response: AngleResponse
     reverse_scale: FloatArray
     loading: FloatArray
     flow_mw: FloatArray
@@ -49,6 +52,13 @@ class Candidates:
     def n_candidate(self) -> int:
         """Number of candidates."""
         return len(self.kind)
+
+    def columns(self, candidates: IntArray) -> FloatArray:
+        """Return the congestion per unit of shadow price of the forward direction, (n_chosen, n_bus) [-].
+
+        Minus it is that of the reverse direction. Made when asked for: of very many candidates few are looked at.
+        """
+        return self.response.congestion(sparse.csr_array(self.gain[candidates]))
 
     def name(self, candidate: int, forward: bool) -> str:
         """Return the constraint's name as it stands in every table."""
@@ -102,7 +112,8 @@ def candidates_at(
         kind=("thermal",) * rated.size + rows.kind,
         contingency=("",) * rated.size + rows.contingency,
         monitored=tuple(network.branches[k] for k in rated) + rows.monitored,
-        column=response.congestion(gain),
+        gain=gain,
+        response=response,
         reverse_scale=np.concatenate([thermal.reverse_scale, np.ones(rows.n_row)]),
         loading=flow / limit,
         flow_mw=flow * base,
@@ -116,7 +127,7 @@ class _Thermal:
     flow: FloatArray
 
 
-def _thermal(network: Network, point: OperatingPoint, rated: np.ndarray[tuple[int], np.dtype[np.int64]]) -> _Thermal:
+def _thermal(network: Network, point: OperatingPoint, rated: IntArray) -> _Thermal:
     """Return branch limits: the apparent power at the sending end, which in a linear dispatch is active power."""
     along_from, size_from = _apparent(point.p_from, point.q_from, point.dp_from, point.dq_from, rated)
     along_to, size_to = _apparent(point.p_to, point.q_to, point.dp_to, point.dq_to, rated)
@@ -136,7 +147,7 @@ def _thermal(network: Network, point: OperatingPoint, rated: np.ndarray[tuple[in
 
 
 def _apparent(
-    p: FloatArray, q: FloatArray, dp: FloatArray, dq: FloatArray, rated: np.ndarray[tuple[int], np.dtype[np.int64]]
+    p: FloatArray, q: FloatArray, dp: FloatArray, dq: FloatArray, rated: IntArray
 ) -> tuple[FloatArray, FloatArray]:
     """Return the derivative of the apparent power along the branch angle, and the apparent power."""
     p, q, dp, dq = p[rated], q[rated], dp[rated], dq[rated]

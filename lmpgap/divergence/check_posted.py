@@ -140,7 +140,7 @@ def check_posted_prices(
         )
     mix = node_mix(network, hubs, prices.buses)
     source = points.get(factors_from) or next(iter(points.values()))
-    recomputed = source.delivery_factors() @ mix.T
+    recomputed = np.asarray((mix @ source.delivery_factors().T).T)
     factors = compare_factors(prices, recomputed, tolerances)
     per_day = max(1, round(24 * 60 / labels.interval_minutes))
     found += stale_findings(stale_stretches(factors, per_day), factors, prices, labels, source.formulation)

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
+from scipy import sparse
 
 from lmpgap.divergence.candidates import Candidates
 from lmpgap.divergence.findings import Finding
@@ -14,7 +15,7 @@ from lmpgap.divergence.labels import IntervalLabels, listed, stretches
 from lmpgap.divergence.operating_points import OperatingPoints
 from lmpgap.divergence.price_set import PriceSet, places
 from lmpgap.divergence.recovery import SparseFit, choose_among_alike, sparse_fit
-from lmpgap.scenario.network import FloatArray
+from lmpgap.scenario.network import FloatArray, IntArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
 MODEL_DIFFERENCE = 0.05
@@ -46,6 +47,10 @@ RECOVERED_COLUMNS = [
 ]  # fmt: skip
 
 
+SEPARATOR = "; "
+"""Between the names of constraints that cannot be told apart."""
+
+
 @dataclass(frozen=True, kw_only=True)
 class Explanation:
     """What explains the posted congestion of all intervals.
@@ -55,7 +60,8 @@ class Explanation:
     recovered : DataFrame
         One row per interval and constraint: `RECOVERED_COLUMNS`. ``shadow_price`` [$/MWh], ``largest_effect`` on a node
         (signed, at node ``largest_at``) [$/MWh], ``loading`` of the operating point [-] and ``flow`` [MW or MVA], both
-        negative against the forward direction, ``alike``: constraints that explain as well, ``rest``: largest
+        negative against the forward direction, ``alike``: constraints that explain as well (`SEPARATOR` between
+        them), ``rest``: largest
         unexplained congestion of the interval [$/MWh], ``explained``: whether that is within the rounding.
     rest : (n_interval, n_node)
         Unexplained congestion [$/MWh]; ``nan`` where it was not looked at.
@@ -74,7 +80,7 @@ class Explanation:
 
 def explain_congestion(
     posted: PriceSet,
-    mix: FloatArray,
+    mix: sparse.csr_array,
     points: Mapping[str, OperatingPoints],
     tolerances: Tolerances = DEFAULT_TOLERANCES,
     *,
@@ -86,7 +92,7 @@ def explain_congestion(
     ----------
     posted
         Posted prices of the nodes; intervals as in ``points``.
-    mix : (n_node, n_bus)
+    mix : sparse (n_node, n_bus)
         What each node is made of.
     points
         Operating points by formulation. Of their own shift factors, and the linear ones at the flows of a nonlinear
@@ -156,7 +162,11 @@ def _per_stretch(
         top = part.iloc[int(part["largest_effect"].abs().to_numpy().argmax())]
         effect, node = float(top["largest_effect"]), str(top["largest_at"])
         when = labels.stretch(posted.intervals[first], posted.intervals[last])
-        alike = f" (or {top['alike']}, which these prices cannot tell from it)" if top["alike"] else ""
+        alike = (
+            f" (or {listed(str(top['alike']).split(SEPARATOR))}, which these prices cannot tell from it)"
+            if top["alike"]
+            else ""
+        )
         price = f"a shadow price of up to {float(part['shadow_price'].max()):,.2f} $/MWh"
         flows = f"{abs(float(top['flow'])):,.0f} MW or {100.0 * abs(float(top['loading'])):.0f} % of the limit"
         if kind == "reversed-constraint":
@@ -226,11 +236,20 @@ class _Interval:
     """The recovery problem of one interval."""
 
     start: pd.Timestamp
-    nodes: np.ndarray[tuple[int], np.dtype[np.int64]]
+    nodes: IntArray
     congestion: FloatArray
-    columns: FloatArray
+    mix: sparse.csr_array
     free: FloatArray
     candidates: Candidates
+
+    def columns(self, candidates: IntArray) -> FloatArray:
+        """Return the effect of candidates on the nodes, without their share along the delivery factors.
+
+        That share is a matter of the reference, and fitted freely; without it an effect can be read as such.
+        """
+        at_nodes = (self.mix @ self.candidates.columns(candidates).T).T
+        factor = self.free[0]
+        return np.asarray(at_nodes - np.outer(at_nodes @ factor / (factor @ factor), factor))
 
     def explain(self, tolerance: float, before: tuple[tuple[str, str, str], ...]) -> SparseFit:
         """Return the explanation by loaded constraints if there is one, else by any."""
@@ -243,7 +262,7 @@ class _Interval:
             first_loaded = ()
         close = MODEL_DIFFERENCE * self.size
         fit = _widened(
-            sparse_fit(self.congestion, self.columns[loaded], self.free, tolerance, first=first_loaded, close=close),
+            sparse_fit(self.congestion, self.columns(loaded), self.free, tolerance, first=first_loaded, close=close),
             loaded,
         )
         if fit.explained:
@@ -253,7 +272,8 @@ class _Interval:
             return apart
         if np.max(np.abs(fit.rest)) <= close:
             return fit
-        wide = sparse_fit(self.congestion, self.columns, self.free, tolerance, close=close)
+        every = np.arange(self.candidates.n_candidate)
+        wide = sparse_fit(self.congestion, self.columns(every), self.free, tolerance, close=close)
         # Enough constraints that do not bind fit anything; few that leave much less are worth telling.
         much_better = np.max(np.abs(wide.rest)) < 0.25 * np.max(np.abs(fit.rest))
         return wide if much_better and wide.chosen.size <= fit.chosen.size + 2 else fit
@@ -265,7 +285,7 @@ class _Interval:
 
     def _but_few_nodes(self, fit: SparseFit, tolerance: float) -> SparseFit | None:
         """Return the same constraints fitted to all nodes but a few, if that explains the others."""
-        columns = np.vstack([self.columns[fit.chosen], self.free])
+        columns = np.vstack([self.columns(fit.chosen), self.free])
         kept = np.arange(self.nodes.size)
         rest = fit.rest
         for _ in range(int(FEW_NODES * self.nodes.size)):
@@ -285,15 +305,17 @@ class _Interval:
         told: list[tuple[object, ...]] = []
         named, _ = choose_among_alike(fit, candidates.loading)
         worst = float(np.max(np.abs(fit.rest), initial=0.0))
+        needed = sorted({*fit.chosen.tolist(), *named.tolist(), *(j for group in fit.alike for j in group)})
+        column = dict(zip(needed, self.columns(np.array(needed, dtype=np.int64)), strict=True))
         for member, chosen, coefficient, alike in zip(named, fit.chosen, fit.coefficient, fit.alike, strict=True):
             # What is named instead has the effect of what was fitted, with its own shadow price.
-            effect = coefficient * self.columns[chosen]
-            own = self.columns[member]
+            effect = coefficient * column[int(chosen)]
+            own = column[int(member)]
             scaled = coefficient if member == chosen else float(own @ effect / (own @ own))
             forward = scaled >= 0.0
             top = int(np.argmax(np.abs(effect - effect.mean())))
             others = [
-                candidates.name(int(j), float(self.columns[j] @ effect) >= 0.0)
+                candidates.name(int(j), float(column[j] @ effect) >= 0.0)
                 for j in sorted({int(chosen), *alike} - {int(member)})
             ]
             told.append(
@@ -309,7 +331,7 @@ class _Interval:
                     str(posted.buses[self.nodes[top]]),
                     float(candidates.loading[member]),
                     float(candidates.flow_mw[member]),
-                    listed(others) if others else "",
+                    SEPARATOR.join(others),
                     worst,
                     fit.explained,
                 )
@@ -317,7 +339,7 @@ class _Interval:
         return told
 
 
-def _widened(fit: SparseFit, positions: np.ndarray[tuple[int], np.dtype[np.int64]]) -> SparseFit:
+def _widened(fit: SparseFit, positions: IntArray) -> SparseFit:
     """Return a fit on some of the columns in terms of all."""
     return SparseFit(
         chosen=positions[fit.chosen],
@@ -329,32 +351,25 @@ def _widened(fit: SparseFit, positions: np.ndarray[tuple[int], np.dtype[np.int64
     )
 
 
-def _interval(posted: PriceSet, mix: FloatArray, points: OperatingPoints, position: int) -> _Interval | None:
+def _interval(posted: PriceSet, mix: sparse.csr_array, points: OperatingPoints, position: int) -> _Interval | None:
     candidates, factor = points.candidates(position)
     congestion = posted.congestion[position]
     node_factor = mix @ np.nan_to_num(factor)
     nodes = np.flatnonzero(np.isfinite(congestion) & np.isfinite(node_factor) & (node_factor != 0.0))
     if nodes.size < 3 or candidates.n_candidate == 0:
         return None
-    part = mix[nodes]
-    # Congestion is quoted against the reference; taking out the factors' share at the first node changes nothing that
-    # the free column does not give back, and keeps effects readable: those on the node of least effect are small.
-    columns = candidates.column @ part.T
-    columns = columns - np.outer(
-        columns @ node_factor[nodes] / (node_factor[nodes] @ node_factor[nodes]), node_factor[nodes]
-    )
     return _Interval(
         start=posted.intervals[position],
         nodes=nodes,
         congestion=congestion[nodes],
-        columns=columns,
+        mix=sparse.csr_array(mix[nodes]),
         free=node_factor[nodes][None, :],
         candidates=candidates,
     )
 
 
 def _best_points(
-    posted: PriceSet, mix: FloatArray, points: Sequence[OperatingPoints], tolerance: float, probes: int
+    posted: PriceSet, mix: sparse.csr_array, points: Sequence[OperatingPoints], tolerance: float, probes: int
 ) -> OperatingPoints | None:
     """Return the operating points that leave the least congestion unexplained in the most congested intervals."""
     if len(points) <= 1:

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
+from scipy import sparse
 
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import OperatingPoint
@@ -121,25 +122,20 @@ def operating_points(
     return found
 
 
-def node_mix(network: Network, hubs: pd.DataFrame | None, nodes: pd.Index[str]) -> FloatArray:
-    """Return what each node is made of, (n_node, n_bus): a bus of itself, a hub of its weighted buses.
+def node_mix(network: Network, hubs: pd.DataFrame | None, nodes: pd.Index[str]) -> sparse.csr_array:
+    """Return what each node is made of, sparse (n_node, n_bus): a bus of itself, a hub of its weighted buses.
 
-    Rows of nodes that are neither are ``nan``.
+    Rows of nodes that are neither are empty.
     """
-    mix = np.full((len(nodes), network.n_bus), np.nan)
     buses = pd.Index(network.buses, dtype="str")
-    at = buses.get_indexer(nodes)
-    rows = np.flatnonzero(at >= 0)
-    mix[rows] = 0.0
-    mix[rows, at[rows]] = 1.0
+    at = np.asarray(buses.get_indexer(nodes), dtype=np.int64)
+    row = np.flatnonzero(at >= 0)
+    column, weight = at[row], np.ones(row.size)
     if hubs is not None and not hubs.empty:
-        member = places(buses, hubs["bus"])
-        row = np.where(member >= 0, places(nodes, hubs["hub"]), -1)
+        hub, member = places(nodes, hubs["hub"]), places(buses, hubs["bus"])
         # A bus of the same name comes first.
-        row = np.where((row >= 0) & (at[row] < 0), row, -1)
-        used = np.flatnonzero(row >= 0)
-        mix[np.unique(row[used])] = 0.0
-        np.add.at(mix, (row[used], member[used]), hubs["weight"].to_numpy(float)[used])
-        total = mix.sum(axis=1, keepdims=True)
-        mix = np.where(np.abs(total) > 0.0, mix / np.where(total == 0.0, 1.0, total), mix)
-    return mix
+        used = np.flatnonzero((hub >= 0) & (member >= 0) & (at[hub] < 0))
+        total = hubs.groupby("hub")["weight"].transform("sum").to_numpy(float)
+        row, column = np.concatenate([row, hub[used]]), np.concatenate([column, member[used]])
+        weight = np.concatenate([weight, (hubs["weight"].to_numpy(float) / total)[used]])
+    return sparse.csr_array((weight, (row, column)), shape=(len(nodes), len(buses)))

@@ -90,8 +90,8 @@ def sparse_fit(
     Returns
     -------
     SparseFit
-        If no set up to ``most`` explains, the smallest one with a rest of at most ``close``, and if there is none either,
-        the largest for which every member halves the rest on average.
+        If no set up to ``most`` explains, the smallest one with a rest of at most ``close``, and if there is none
+        either, the largest for which every member halves the rest on average.
     """
     problem = _Problem(posted, columns, free, tolerance)
     if first:
@@ -247,7 +247,10 @@ def choose_among_alike(fit: SparseFit, loading: FloatArray) -> tuple[IntArray, B
         Size of the loading of each column's constraint; ``nan`` where it is not known.
     """
     size = np.nan_to_num(np.abs(loading), nan=0.0)
-    named = [
-        max((int(k), *others), key=lambda j: (size[j], j == k)) for k, others in zip(fit.chosen, fit.alike, strict=True)
-    ]
+    named: list[int] = []
+    for chosen, others in zip(fit.chosen.tolist(), fit.alike, strict=True):
+        # Two members of one set never go by the same name.
+        open_to = [j for j in (chosen, *others) if j == chosen or j not in (*named, *fit.chosen)]
+        # The fitted one comes first, so it stays where none is loaded more.
+        named.append(open_to[int(np.argmax(size[open_to]))])
     return np.array(named, dtype=np.int64), np.array([len(others) > 0 for others in fit.alike], dtype=bool)

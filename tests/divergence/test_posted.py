@@ -6,8 +6,10 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from lmpgap.divergence.check_posted import check_posted_prices
 from lmpgap.divergence.findings import FINDING_COLUMNS, KINDS, findings_table
 from lmpgap.divergence.labels import IntervalLabels
+from lmpgap.divergence.operating_points import operating_points
 from lmpgap.divergence.posted import order_posted
 from lmpgap.divergence.posted_checks import (
     identity_findings,
@@ -16,6 +18,8 @@ from lmpgap.divergence.posted_checks import (
     revision_findings,
 )
 from lmpgap.divergence.price_tables import price_set
+from lmpgap.scenario.settings import DcConvention
+from tests.support.networks import load_network
 
 HOURS = pd.date_range("2026-03-02T07:00:00Z", periods=6, freq="h").as_unit("us")
 LABELS = IntervalLabels(time_zone="America/Boise")
@@ -196,3 +200,35 @@ def test_kinds_are_those_of_the_contract():
         "identity", "sign", "stale-factors", "unexplained-congestion", "reversed-constraint",
         "unknown-node", "missing-interval", "repeated-interval", "revised",
     }  # fmt: skip
+
+
+def test_nothing_posted_and_no_operating_point_are_no_error():
+    network, inputs = load_network("case5")
+    nothing = posted_week().iloc[:0]
+    check = check_posted_prices(nothing, network, HOURS, LABELS, {})
+    assert check.findings.empty
+    assert check.prices is None
+    # Without an operating point the checks that need none are made.
+    rows = posted_week(nodes=network.buses)
+    rows.loc[0, "lmp"] += 2.0
+    check = check_posted_prices(rows, network, HOURS, LABELS, {})
+    assert check.findings["kind"].tolist() == ["identity"]
+    assert check.recovered.empty
+    empty = pd.DataFrame(columns=["interval_start", "formulation", "bus", "v_pu", "angle_deg", "load_mw"])
+    assert operating_points(empty, network, lambda _: inputs, HOURS, DcConvention()) == {}
+
+
+def test_posted_prices_with_gaps_and_foreign_hours_are_checked_where_they_are():
+    network, inputs = load_network("case5")
+    flat = pd.DataFrame(
+        [(hour, "dc", bus, 1.0, 0.0) for hour in HOURS[:2] for bus in network.buses],
+        columns=["interval_start", "formulation", "bus", "v_pu", "angle_deg"],
+    )
+    points = operating_points(flat, network, lambda _: inputs, HOURS, DcConvention())
+    rows = posted_week(nodes=network.buses).assign(congestion_component=0.0, loss_component=0.0)
+    rows["lmp"] = rows["energy_component"]
+    rows = rows[rows["interval_start"] != HOURS[3]]
+    elsewhere = rows.head(5).assign(interval_start=pd.Timestamp("2027-01-01T00:00:00Z"))
+    check = check_posted_prices(pd.concat([rows, elsewhere]), network, HOURS, LABELS, points)
+    assert check.findings["kind"].tolist() == ["missing-interval"]
+    assert np.isnan(check.prices.lmp[3]).all()

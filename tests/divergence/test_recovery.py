@@ -23,12 +23,13 @@ def response_and_candidates(name: str, formulation: str = "dc", angle_scale: flo
         network, inputs.branch_in_service, formulation, np.ones(network.n_bus), angle, DcConvention()
     )
     response = AngleResponse.of(network, inputs.branch_in_service, point)
-    return network, inputs, point, response, candidates_at(network, inputs, point, response)
+    candidates = candidates_at(network, inputs, point, response)
+    return network, response, candidates, candidates.columns(np.arange(candidates.n_candidate))
 
 
 def test_shift_factors_of_five_buses_as_published():
     """Shift factors of the five-bus network with reference bus 4 and buses 1, 2, 3, 5 (computed with b = 1/x)."""
-    network, _, _, response, candidates = response_and_candidates("case5")
+    network, response, candidates, columns = response_and_candidates("case5")
     expected = {
         ("B1", "B2"): (0.1939, -0.4759, -0.3490, 0.1595),
         ("B1", "B4"): (0.4376, 0.2583, 0.1895, 0.3600),
@@ -41,14 +42,14 @@ def test_shift_factors_of_five_buses_as_published():
             i for i in range(network.n_branch)
             if (network.buses[network.from_bus[i]], network.buses[network.to_bus[i]]) == (start, end)
         )  # fmt: skip
-        row = -candidates.column[candidates.monitored.index(network.branches[branch])]
+        row = -columns[candidates.monitored.index(network.branches[branch])]
         row = row - row[3]
         assert row[[0, 1, 2, 4]] == pytest.approx(values, abs=5e-5)
 
 
 def test_random_sets_of_constraints_are_named_from_cents():
     """Fifty cases with one to four known binding constraints: at least 95 % named, doubtful ones flagged."""
-    _, _, _, response, candidates = response_and_candidates("case118", "dc-loss", 0.1)
+    _, response, candidates, columns = response_and_candidates("case118", "dc-loss", 0.1)
     rng = np.random.default_rng(118)
     free = response.delivery_factor[None, :]
     named = doubtful = 0
@@ -56,8 +57,8 @@ def test_random_sets_of_constraints_are_named_from_cents():
         size = 1 + case % 4
         truth = rng.choice(candidates.n_candidate, size, replace=False)
         shadow = rng.uniform(5.0, 60.0, size) * rng.choice([-1.0, 1.0], size)
-        exact = shadow @ candidates.column[truth] + rng.normal() * response.delivery_factor
-        fit = sparse_fit(np.round(exact, 2), candidates.column, free, TOLERANCE)
+        exact = shadow @ columns[truth] + rng.normal() * response.delivery_factor
+        fit = sparse_fit(np.round(exact, 2), columns, free, TOLERANCE)
         assert fit.explained
         found = dict(zip(fit.chosen.tolist(), fit.coefficient, strict=True))
         if any(fit.alike):
@@ -72,11 +73,11 @@ def test_random_sets_of_constraints_are_named_from_cents():
 
 
 def test_the_reference_of_the_posted_components_need_not_be_known():
-    _, _, _, response, candidates = response_and_candidates("case30", "dc-loss", 0.1)
-    exact = 20.0 * candidates.column[3] - 8.0 * candidates.column[11]
+    _, response, _, columns = response_and_candidates("case30", "dc-loss", 0.1)
+    exact = 20.0 * columns[3] - 8.0 * columns[11]
     for shift in (0.0, 7.0, -30.0):
         fit = sparse_fit(
-            exact + shift * response.delivery_factor, candidates.column, response.delivery_factor[None, :], TOLERANCE
+            exact + shift * response.delivery_factor, columns, response.delivery_factor[None, :], TOLERANCE
         )
         assert set(fit.chosen) == {3, 11}
         assert fit.coefficient[fit.chosen == 11] == pytest.approx(-8.0, abs=1e-6)
@@ -94,38 +95,35 @@ def test_identical_parallel_branches_are_flagged_as_alike():
     point = point_from_voltages(network, inputs.branch_in_service, "dc", flat, 0.0 * flat, DcConvention())
     response = AngleResponse.of(network, inputs.branch_in_service, point)
     candidates = candidates_at(network, inputs, point, response)
+    columns = candidates.columns(np.arange(candidates.n_candidate))
     twins = {0, candidates.monitored.index("twin")}
-    fit = sparse_fit(
-        np.round(30.0 * candidates.column[0], 2), candidates.column, response.delivery_factor[None, :], TOLERANCE
-    )
+    fit = sparse_fit(np.round(30.0 * columns[0], 2), columns, response.delivery_factor[None, :], TOLERANCE)
     assert fit.explained
     assert len(fit.chosen) == 1
     assert {int(fit.chosen[0]), *fit.alike[0]} >= twins
 
 
 def test_nothing_is_explained_by_nothing():
-    _, _, _, response, candidates = response_and_candidates("case30")
+    _, response, _, columns = response_and_candidates("case30")
     rng = np.random.default_rng(1)
-    fit = sparse_fit(
-        rng.uniform(-ROUNDING, ROUNDING, 30), candidates.column, response.delivery_factor[None, :], TOLERANCE
-    )
+    fit = sparse_fit(rng.uniform(-ROUNDING, ROUNDING, 30), columns, response.delivery_factor[None, :], TOLERANCE)
     assert fit.explained
     assert fit.chosen.size == 0
 
 
 def test_congestion_that_no_constraint_explains_is_left_as_the_rest():
-    _, _, _, response, candidates = response_and_candidates("case30", "dc-loss", 0.1)
+    _, response, _, columns = response_and_candidates("case30", "dc-loss", 0.1)
     noise = np.random.default_rng(2).normal(0.0, 0.3, 30)
-    exact = 40.0 * candidates.column[5]
-    fit = sparse_fit(exact + noise, candidates.column, response.delivery_factor[None, :], TOLERANCE, most=4)
+    exact = 40.0 * columns[5]
+    fit = sparse_fit(exact + noise, columns, response.delivery_factor[None, :], TOLERANCE, most=4)
     assert not fit.explained
     assert 5 in fit.chosen
     assert np.abs(fit.rest).max() > 0.1
 
 
 def test_the_set_of_the_hour_before_is_tried_first_and_dropped_when_idle():
-    _, _, _, response, candidates = response_and_candidates("case30", "dc-loss", 0.1)
+    _, response, _, columns = response_and_candidates("case30", "dc-loss", 0.1)
     free = response.delivery_factor[None, :]
-    posted = np.round(20.0 * candidates.column[3], 2)
-    assert set(sparse_fit(posted, candidates.column, free, TOLERANCE, first=(3,)).chosen) == {3}
-    assert set(sparse_fit(posted, candidates.column, free, TOLERANCE, first=(3, 7)).chosen) == {3}
+    posted = np.round(20.0 * columns[3], 2)
+    assert set(sparse_fit(posted, columns, free, TOLERANCE, first=(3,)).chosen) == {3}
+    assert set(sparse_fit(posted, columns, free, TOLERANCE, first=(3, 7)).chosen) == {3}
