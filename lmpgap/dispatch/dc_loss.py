@@ -9,7 +9,7 @@ larger end, |flow +- loss/2|.
 
 Where prices are negative, burning power pays and the inequality opens ("Fictitious losses in the DCOPF with a
 piecewise linear approximation of losses", IEEE PES General Meeting, 2013). That is detected, and the interval is
-solved again with the losses frozen around the recovered flows.
+solved again with the losses of those branches held to the physical ones (`lmpgap.dispatch.open_losses`).
 """
 
 from __future__ import annotations
@@ -37,15 +37,15 @@ class DcLossDispatch(DcDispatch):
     ) -> DispatchResult:
         """Solve one interval; ``start`` is ignored.
 
-        Where more than the tolerated loss is fictitious, the result is that of the dispatch with losses frozen
-        around its own flows, and says so in ``loss_slack_open`` and ``notes``.
+        Where more than the tolerated loss is fictitious, the result is that of the dispatch with losses held to those
+        of its own flows, and says so in ``loss_slack_open`` and ``notes``.
         """
         began = time.perf_counter()
         relaxed = super().solve(inputs, flow_limits)
         tolerated = self.options.tolerances.fictitious_loss_mw / self.network.base_mva
         if not relaxed.status.has_solution or relaxed.fictitious_loss <= tolerated:
             return relaxed
-        from lmpgap.dispatch.frozen import resolve_open_slack
+        from lmpgap.dispatch.open_losses import resolve_open_slack
 
         result = resolve_open_slack(self, relaxed, inputs, flow_limits)
         return replace(

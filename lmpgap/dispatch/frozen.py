@@ -38,9 +38,6 @@ from lmpgap.dispatch.supply import SupplyResult
 from lmpgap.errors import LmpgapError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network, incidence
 
-OPEN_SLACK_PASSES = 30
-"""Passes of re-freezing losses around the flows found; measured: 2 to 4 suffice."""
-
 FACTOR_PASSES = 40
 """Passes of adjusting the loss offset; measured: 2 to 12 suffice."""
 
@@ -119,46 +116,6 @@ class FrozenLossDispatch(DcDispatch):
     def _objective(self, program: ConicProgram, solution: ConicSolution, supply: SupplyResult) -> float:
         moved = supply.p - self.base_p
         return program.cost(solution.x) - 0.5 * self.proximal * self.network.base_mva**2 * float(moved @ moved)
-
-
-def resolve_open_slack(
-    formulation: DcDispatch, relaxed: DispatchResult, inputs: IntervalInputs, flow_limits: FlowLimits
-) -> DispatchResult:
-    """Return the dispatch with losses frozen around its own flows, for an interval whose relaxed losses are fictitious.
-
-    The losses are frozen around the flows found until they reproduce themselves. A plain repetition may go round in
-    circles, so the proximal weight grows whenever a pass does not halve the error; near the end the dispatch hardly
-    moves and the weight leaves no trace in the prices.
-    """
-    network, options = formulation.network, formulation.options
-    tolerated = options.tolerances.fictitious_loss_mw / network.base_mva
-    burnt = relaxed.fictitious_loss * network.base_mva
-    base, best, seconds, passes = relaxed, None, 0.0, 0
-    proximal, error = options.tolerances.proximal_at_base, np.inf
-    while passes < OPEN_SLACK_PASSES:
-        passes += 1
-        frozen = FrozenLossDispatch(network, formulation.branch_in_service, options, base, proximal=proximal)
-        result = frozen.solve(inputs, flow_limits)
-        seconds += result.solver_seconds
-        if not result.status.has_solution:
-            break
-        if best is None or abs(result.fictitious_loss) < abs(best.fictitious_loss):
-            best = result
-        if abs(result.fictitious_loss) <= tolerated:
-            break
-        if abs(result.fictitious_loss) > 0.5 * error:
-            proximal *= 4.0
-        base, error = result, abs(result.fictitious_loss)
-    if best is None:
-        message = f"feasible only by burning {burnt:.4g} MW that no flow causes; without it: {result.message}"
-        return replace(result, message=message, loss_slack_open=True, solver_seconds=seconds)
-    note = (
-        f"the relaxed losses held {burnt:.4g} MW that no flow causes; solved again with losses frozen around its own "
-        f"flows ({passes} pass{'es' if passes > 1 else ''}"
-    )
-    left = abs(best.fictitious_loss) * network.base_mva
-    note += ")" if abs(best.fictitious_loss) <= tolerated else f"; {left:.4g} MW of loss are left out)"
-    return replace(best, loss_slack_open=True, solver_seconds=seconds, notes=(*best.notes, note))
 
 
 class DeliveryFactorDispatch(DcDispatch):

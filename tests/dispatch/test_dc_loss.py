@@ -9,6 +9,8 @@ import pytest
 
 from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
+from lmpgap.prices.certificate import certify
+from lmpgap.prices.components import split_prices
 from lmpgap.scenario.settings import DcConvention
 from tests.dispatch.grids import finite_difference_price, grid, prices, solve
 from tests.support.networks import load_network
@@ -165,6 +167,37 @@ def test_negative_prices_open_the_slack_and_are_solved_again() -> None:
     assert 100 * result.point.loss.sum() == pytest.approx(k * flow**2, abs=1e-3)
     assert abs(result.fictitious_loss) * 100 <= 0.01
     assert prices(network, result) == pytest.approx([-20.0, -20 * (1 + k * flow) / (1 - k * flow)], abs=2e-3)
+
+
+def test_a_pocket_of_negative_prices_in_a_network_of_positive_ones() -> None:
+    # Wind at W1 fills a line out of the pocket W1-W4 and is worth -30 in it; burning would pay on each of its four
+    # lossy lines in turn. Outside prices are positive and the losses stay in their cones.
+    network, inputs = grid(
+        [
+            ("W1", "W2", 0.02, 0.1, FREE),
+            ("W2", "W3", 0.03, 0.1, FREE),
+            ("W3", "W4", 0.01, 0.1, FREE),
+            ("W1", "W3", 0.02, 0.2, FREE),
+            ("W4", "A", 0.01, 0.1, 60.0),
+            ("A", "B", 0.02, 0.1, FREE),
+        ],
+        [("W1", 200.0, -30.0), ("B", 200.0, 25.0)],
+        {"W4": 20.0, "A": 90.0, "B": 10.0},
+    )
+    result = solve("dc-loss", network, inputs)
+    weights = inputs.load_p / inputs.load_p.sum()
+    split = split_prices(network, inputs.branch_in_service, result, weights)
+    certificate = certify(network, inputs, result, split)
+    assert result.loss_slack_open
+    assert certificate.verdict == "certified", certificate.reasons
+    assert prices(network, result)[[0, 5]] == pytest.approx([-30.0, 25.0], abs=1e-5)
+    flow = 0.5 * (result.point.p_from - result.point.p_to)
+    physical = network.r * flow**2  # b = 1/x: (g/b^2) flow^2 = r flow^2
+    assert result.point.loss == pytest.approx(physical, abs=1e-7)
+    for bus in (1, 3, 4):
+        assert prices(network, result)[bus] == pytest.approx(
+            finite_difference_price("dc-loss", network, inputs, bus, 0.05), abs=1e-3
+        )
 
 
 def test_must_run_that_only_fictitious_losses_could_absorb_is_infeasible() -> None:
