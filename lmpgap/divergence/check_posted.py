@@ -9,7 +9,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from lmpgap.divergence.congestion_checks import RECOVERED_COLUMNS, congestion_findings, explain_congestion
+from lmpgap.divergence.congestion_checks import RECOVERED_COLUMNS, explain_congestion
+from lmpgap.divergence.congestion_findings import congestion_findings
 from lmpgap.divergence.factors import compare_factors, factor_table, stale_findings, stale_stretches
 from lmpgap.divergence.findings import findings_table
 from lmpgap.divergence.labels import IntervalLabels
