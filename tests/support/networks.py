@@ -26,7 +26,10 @@ def load_network(name: str, folder: Path = NETWORKS) -> tuple[Network, IntervalI
     )
     position = {bus: i for i, bus in enumerate(buses["bus"])}
     n_bus, n_branch, n_resource = len(buses), len(branches), len(resources)
-    rating = branches.get("normal_rating_mva", pd.Series(np.inf, index=branches.index)).fillna(np.inf) / base
+    rating, emergency = (
+        branches.get(f"{kind}_rating_mva", pd.Series(np.inf, index=branches.index)).fillna(np.inf) / base
+        for kind in ("normal", "emergency")
+    )
     network = Network(
         base_mva=base,
         buses=tuple(buses["bus"]),
@@ -43,7 +46,7 @@ def load_network(name: str, folder: Path = NETWORKS) -> tuple[Network, IntervalI
         tap=branches["tap_ratio"].to_numpy(float),
         shift=np.deg2rad(branches["phase_shift_deg"].to_numpy(float)),
         normal_rating=rating.to_numpy(float),
-        emergency_rating=np.full(n_branch, np.inf),
+        emergency_rating=emergency.to_numpy(float),
         angle_min=np.deg2rad(branches["angle_min_deg"].to_numpy(float)),
         angle_max=np.deg2rad(branches["angle_max_deg"].to_numpy(float)),
         resources=tuple(resources["resource"]),

@@ -59,17 +59,13 @@ def published_figures() -> dict[str, PublishedFigures]:
 
 def load_published(name: str) -> tuple[Network, IntervalInputs]:
     """Return a network and its single interval, e.g. ``"case118_ieee"`` or ``"case118_ieee__api"``."""
-    folder = library_folder()
-    if folder is None:
-        raise FileNotFoundError("install the extra `published` for the benchmark library")
-    kind = name.rsplit("__", 1)[1] if "__" in name else ""
-    text = (folder / kind / f"pglib_opf_{name}.m").read_text()
+    text = _text(name)
     base = float(re.search(r"mpc\.baseMVA\s*=\s*([0-9.eE+-]+)", text).group(1))  # type: ignore[union-attr]
     bus, unit, cost, line = (_matrix(text, key) for key in ("bus", "gen", "gencost", "branch"))
     position = {int(number): i for i, number in enumerate(bus[:, 0])}
     at = np.vectorize(position.__getitem__, otypes=[np.int64])
     n_branch, n_unit = len(line), len(unit)
-    rating = np.where(line[:, 5] > 0, line[:, 5], np.inf) / base
+    rating, emergency = (np.where(line[:, k] > 0, line[:, k], np.inf) / base for k in (5, 7))
     lowest, highest = line[:, 11], line[:, 12]
     network = Network(
         base_mva=base,
@@ -87,7 +83,7 @@ def load_published(name: str) -> tuple[Network, IntervalInputs]:
         tap=np.where(line[:, 8] == 0.0, 1.0, line[:, 8]),
         shift=np.deg2rad(line[:, 9]),
         normal_rating=rating,
-        emergency_rating=np.full(n_branch, np.inf),
+        emergency_rating=emergency,
         angle_min=np.where(np.abs(lowest) >= 360, -np.inf, np.deg2rad(lowest)),
         angle_max=np.where(np.abs(highest) >= 360, np.inf, np.deg2rad(highest)),
         resources=tuple(f"G{k + 1}" for k in range(n_unit)),
@@ -117,6 +113,19 @@ def load_published(name: str) -> tuple[Network, IntervalInputs]:
         fixed_cost=np.where(on, square * p_min**2 + slope * p_min + constant, 0.0),
     )
     return network, inputs
+
+
+def bus_voltages(name: str) -> FloatArray:
+    """Return the nominal voltage of each bus [kV]."""
+    return np.asarray(_matrix(_text(name), "bus")[:, 9])
+
+
+def _text(name: str) -> str:
+    folder = library_folder()
+    if folder is None:
+        raise FileNotFoundError("install the extra `published` for the benchmark library")
+    kind = name.rsplit("__", 1)[1] if "__" in name else ""
+    return (folder / kind / f"pglib_opf_{name}.m").read_text()
 
 
 def _matrix(text: str, key: str) -> FloatArray:
