@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import plotly.graph_objects as go
 
-from lmpgap.report.figures.base import floats, picture
+from lmpgap.report.figures.base import floats, money_unit, picture
 from lmpgap.report.palette import DASH, LIGHT, colour
 from lmpgap.report.view.model import PairView, WeeklyView
 from lmpgap.scenario.network import FloatArray
@@ -44,7 +44,7 @@ def duration_curve(view: WeeklyView) -> go.Figure:
         )
     figure.update_xaxes(title_text="share of bus-hours, %", range=[0, 100])
     figure.update_yaxes(
-        title_text=f"size of difference, {view.currency}/MWh", type="log", range=_log_range(view), dtick=1
+        title_text=f"size of difference, {money_unit(view.currency)}/MWh", type="log", range=_log_range(view), dtick=1
     )
     figure.update_layout(hovermode="x unified")
     return figure
@@ -69,12 +69,18 @@ def hour_profile_values(view: WeeklyView, pair: PairView) -> tuple[FloatArray, F
     return endings.astype(float), size, mean
 
 
+def _mean(values: FloatArray) -> float:
+    """Return the mean of the finite values, not a number where there is none."""
+    finite = values[np.isfinite(values)]
+    return float(finite.mean()) if finite.size else float("nan")
+
+
 def hour_profile(view: WeeklyView) -> go.Figure:
     """Return the mean difference by hour ending: its size at all buses, its mean, and one bus."""
     endings, size, mean = hour_profile_values(view, view.main)
     bus = max(view.main.worst_bus, 0)
     difference = view.cube.difference(view.main.base, view.main.against)[bus].astype(float)
-    single = [float(np.nanmean(difference[view.hours.hour_ending == ending])) for ending in endings]
+    single = [_mean(difference[view.hours.hour_ending == ending]) for ending in endings]
     figure = picture(330, top=40)
     figure.add_trace(
         go.Bar(
@@ -101,6 +107,6 @@ def hour_profile(view: WeeklyView) -> go.Figure:
             )
         )
     figure.update_xaxes(title_text="hour ending", dtick=3, tick0=3, range=[0.3, 24.7])
-    figure.update_yaxes(title_text=f"{view.currency}/MWh", zeroline=True, zerolinecolor=LIGHT["rule"])
+    figure.update_yaxes(title_text=f"{money_unit(view.currency)}/MWh", zeroline=True, zerolinecolor=LIGHT["rule"])
     figure.update_layout(hovermode="x unified", bargap=0.25)
     return figure
