@@ -218,8 +218,14 @@ AUDIT_WORDS = {
     "voltage": "Voltage outside its band",
     "angle": "Angle difference beyond its limit",
     "reactive": "Resource at its reactive limit",
-    "redispatch": "Output moved by the repair",
-    "repair-cost": "Cost of the repair over the AC optimum",
+    "output": "Resource beyond its range, making up what is missing",
+    "losses": "Losses in the AC power flow",
+    "angle-error": "Branch angle off by",
+    "no-power-flow": "No AC power flow near the dispatch",
+    "no-repair": "No AC-feasible redispatch found",
+    "moved": "Power moved by the nearest repair",
+    "redispatch": "Output moved by the nearest repair",
+    "repair-cost": "Cost of the nearest repair over the AC optimum",
 }
 
 
@@ -236,6 +242,10 @@ def audit_table(audit: pd.DataFrame, hours: Hours) -> Table:
         for (formulation, finding), part in frame.groupby(["formulation", "finding"], sort=False, observed=True):
             beyond = (part["value"] - part["limit"]).abs().where(part["limit"].notna(), part["value"].abs())
             if beyond.isna().all():
+                # Told by its reason, which stands in the place of the element.
+                reason, first = str(part["element"].iloc[0]), hours.label[int(part["place"].iloc[0])]
+                words = AUDIT_WORDS.get(str(finding), str(finding))
+                rows.append((str(formulation), words, f"{part['place'].nunique()}", reason, "", "", "", first))
                 continue
             worst = part.iloc[int(np.nan_to_num(beyond.to_numpy(dtype=float), nan=-1.0).argmax())]
             limit = float(worst["limit"])
