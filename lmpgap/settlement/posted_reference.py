@@ -7,7 +7,7 @@ than half of the weight are wrong: 1 where the operator uses the scenario's refe
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -23,18 +23,32 @@ faults."""
 
 @dataclass(frozen=True, kw_only=True)
 class ReferenceEvidence:
-    """In how many intervals the posted components stand on the scenario's reference, within rounding."""
+    """In how many intervals the posted components stand on the scenario's reference, within rounding.
 
+    Attributes
+    ----------
+    name
+        Formulation whose delivery factors the posted ones were held against.
+    agreeing, compared
+        Numbers of intervals.
+    """
+
+    name: str
     agreeing: int
     compared: int
 
     @property
+    def share(self) -> float:
+        """Share of the intervals that agree [-]."""
+        return self.agreeing / self.compared if self.compared else 0.0
+
+    @property
     def on_scenario(self) -> bool:
         """True when the posted components can be taken as published."""
-        return self.compared > 0 and self.agreeing >= AGREEING_SHARE * self.compared
+        return self.compared > 0 and self.share >= AGREEING_SHARE
 
     def __add__(self, other: ReferenceEvidence) -> ReferenceEvidence:
-        return ReferenceEvidence(agreeing=self.agreeing + other.agreeing, compared=self.compared + other.compared)
+        return replace(self, agreeing=self.agreeing + other.agreeing, compared=self.compared + other.compared)
 
 
 def reference_evidence(
@@ -60,7 +74,7 @@ def reference_evidence(
     median = weighted_median(np.where(usable, ratio, 0.0), weight)
     margin = np.nanmax(np.where(usable, slack, 0.0), axis=1, initial=0.0)
     agreeing = compared & (np.abs(median - 1.0) <= margin + 1e-9)
-    return ReferenceEvidence(agreeing=int(agreeing.sum()), compared=int(compared.sum()))
+    return ReferenceEvidence(name=against.name, agreeing=int(agreeing.sum()), compared=int(compared.sum()))
 
 
 def weighted_median(values: FloatArray, weights: FloatArray) -> FloatArray:

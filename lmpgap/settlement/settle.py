@@ -122,12 +122,16 @@ def settle(
         return Chunk.of(scenario, basket, part, prices, solves, posted, chosen, held)
 
     if claim == POSTED:
-        evidence = ReferenceEvidence(agreeing=0, compared=0)
+        seen = {
+            name: ReferenceEvidence(name=name, agreeing=0, compared=0) for name in dict.fromkeys([against, *baselines])
+        }
         for first in range(0, len(involved), size):
-            evidence += chunk_at(first).evidence(against)
+            chunk = chunk_at(first)
+            seen = {name: evidence + chunk.evidence(name) for name, evidence in seen.items()}
+        # One formulation whose factors agree is enough: the operator clears with some model, seldom with all of them.
+        collected.evidence = max(seen.values(), key=lambda evidence: evidence.share)
         if chosen.posted_reference == "auto":
-            chosen = replace(chosen, posted_reference="scenario" if evidence.on_scenario else "unknown")
-        collected.evidence = evidence
+            chosen = replace(chosen, posted_reference="scenario" if collected.evidence.on_scenario else "unknown")
     progress(TASK, 0, len(involved))
     for first in range(0, len(involved), size):
         chunk = chunk_at(first)
@@ -291,7 +295,7 @@ def _notes(
         )
         notes.append(
             f"In {seen.agreeing} of {seen.compared} intervals the posted components stand on the scenario's reference "
-            f"(delivery factor of the median node, within rounding): {taken}."
+            f"(delivery factor of the median node against {seen.name}, within rounding): {taken}."
         )
     for name, count in collected.without_alternative.items():
         if count:
