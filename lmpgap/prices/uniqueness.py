@@ -58,7 +58,7 @@ class PriceIntervals:
         True where there is only one price; False at dead buses.
     ratio : float
         Smallest over largest singular value of the normalised active gradients [-]: how near to degenerate. Where
-        a bound on it settled the question, an estimate that is right to a factor of about three.
+        a bound on it settled the question, an estimate that is right to a factor of about two.
     n_direction : int
         Directions in which multipliers are free to move; not all of them move prices.
     """
