@@ -62,10 +62,11 @@ def plain(text: object, limit: int | None = None) -> str:
 def plot_text(text: object, limit: int = 36) -> str:
     """Return foreign text for a plotly label: its pseudo-tags disarmed, its direction kept to itself.
 
-    Plotly turns ``&lt;``, ``&gt;`` and ``&amp;`` back into characters after it has looked for tags, and leaves
-    quotes alone; so only these three are replaced.
+    Plotly turns such codes back into characters after it has looked for tags, and leaves quotes alone; so only
+    ``&``, ``<`` and ``>`` are replaced, and the dollar sign, two of which would call for a formula.
     """
     clean = plain(text, limit).replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
+    clean = clean.replace("$", "&#36;")
     if clean.isascii():
         return clean
     return f"{_ISOLATE}{clean}{_END_ISOLATE}"

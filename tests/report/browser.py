@@ -47,26 +47,42 @@ class Watch:
 
 
 @contextmanager
-def opened(
-    path: Path, *, size: tuple[int, int] = SIZES["desktop"], scheme: str = "light", touch: bool = False
-) -> Iterator[tuple[Any, Watch]]:
-    """Open a file in chromium; yields the page, ready for use, and the watch on it."""
+def chromium() -> Iterator[Any]:
+    """Start the browser; yields it."""
     from playwright.sync_api import sync_playwright
 
     with sync_playwright() as playwright:
         browser = playwright.chromium.launch(executable_path=str(CHROMIUM), args=ARGUMENTS)
         try:
-            context = browser.new_context(
-                viewport={"width": size[0], "height": size[1]}, color_scheme=scheme, has_touch=touch, locale="en-US"
-            )
-            page = context.new_page()
-            watch = Watch()
-            watch.attach(page)
-            page.goto(path.resolve().as_uri())
-            page.wait_for_selector("html[data-ready=yes]", state="attached")
-            yield page, watch
+            yield browser
         finally:
             browser.close()
+
+
+@contextmanager
+def opened(
+    browser: Any,
+    path: Path,
+    *,
+    size: tuple[int, int] = SIZES["desktop"],
+    scheme: str = "light",
+    touch: bool = False,
+    wait: bool = True,
+) -> Iterator[tuple[Any, Watch]]:
+    """Open a file; yields the page, ready for use if it has a script to wait for, and the watch on it."""
+    context = browser.new_context(
+        viewport={"width": size[0], "height": size[1]}, color_scheme=scheme, has_touch=touch, locale="en-US"
+    )
+    try:
+        page = context.new_page()
+        watch = Watch()
+        watch.attach(page)
+        page.goto(path.resolve().as_uri())
+        if wait:
+            page.wait_for_selector("html[data-ready=yes]", state="attached")
+        yield page, watch
+    finally:
+        context.close()
 
 
 def draw_all(page: Any) -> None:
@@ -77,13 +93,13 @@ def draw_all(page: Any) -> None:
     page.evaluate("document.documentElement.style.scrollBehavior = 'auto'; window.scrollTo(0, 0)")
 
 
-def take_pictures(path: Path, folder: Path) -> list[Path]:
-    """Write full-page screenshots at phone and desktop size, light and dark, the opening view, and an A4 PDF."""
+def take_pictures(browser: Any, path: Path, folder: Path, schemes: tuple[str, ...] = ("light", "dark")) -> list[Path]:
+    """Write full-page screenshots at phone and desktop size in each scheme, the opening view, and an A4 PDF."""
     folder.mkdir(parents=True, exist_ok=True)
     written = []
-    for scheme in ("light", "dark"):
+    for scheme in schemes:
         for name, size in SIZES.items():
-            with opened(path, size=size, scheme=scheme) as (page, watch):
+            with opened(browser, path, size=size, scheme=scheme) as (page, watch):
                 draw_all(page)
                 target = folder / f"{name}-{scheme}.png"
                 page.screenshot(path=target, full_page=True)
@@ -100,5 +116,6 @@ def take_pictures(path: Path, folder: Path) -> list[Path]:
 
 
 if __name__ == "__main__":
-    for picture in take_pictures(Path(sys.argv[1]), Path(sys.argv[2])):
-        sys.stdout.write(f"{picture}\n")
+    with chromium() as started:
+        for picture in take_pictures(started, Path(sys.argv[1]), Path(sys.argv[2])):
+            sys.stdout.write(f"{picture}\n")

@@ -97,6 +97,11 @@ def floats(values: Any) -> NDArray[np.float32]:
     return np.asarray(values, dtype=np.float32)
 
 
+def money_unit(currency: str) -> str:
+    """Return the currency as it may stand in a title or a hover text, where ``%{`` would begin a placeholder."""
+    return plot_text(currency, 12).replace("%", "&#37;")
+
+
 def labels(names: Any, limit: int = 36) -> list[str]:
     """Return names that are safe in a plotly label."""
     return [plot_text(name, limit) for name in names]

@@ -7,7 +7,7 @@ from collections.abc import Mapping
 import numpy as np
 import plotly.graph_objects as go
 
-from lmpgap.report.figures.base import floats, labels, picture
+from lmpgap.report.figures.base import floats, labels, money_unit, picture
 from lmpgap.report.palette import DASH, LIGHT, SYMBOL, colour
 from lmpgap.report.view.model import FactorsView, SweepView, WeeklyView
 from lmpgap.scenario.network import FloatArray
@@ -42,12 +42,12 @@ def account_stakes(view: WeeklyView) -> go.Figure:
                 "width": 5,
             },
             marker={"symbol": marks, "size": 13, "color": [LIGHT[key] for key in keys]},
-            hovertemplate="%{x:,.0f} " + view.currency + "<extra></extra>",
+            hovertemplate="%{x:,.0f} " + money_unit(view.currency) + "<extra></extra>",
             showlegend=False,
         )
     )
     figure.update_xaxes(
-        title_text=view.currency,
+        title_text=money_unit(view.currency),
         zeroline=True,
         zerolinecolor=LIGHT["ink"],
         showgrid=True,
@@ -140,6 +140,6 @@ def sweep_errors(factor: FloatArray, errors: Mapping[str, FloatArray], currency:
             )
         )
     figure.update_xaxes(title_text="load, multiple of the scenario's", showgrid=True)
-    figure.update_yaxes(title_text=f"mean error against ac, {currency}/MWh", rangemode="tozero")
+    figure.update_yaxes(title_text=f"mean error against ac, {money_unit(currency)}/MWh", rangemode="tozero")
     figure.update_layout(hovermode="x unified", showlegend=True)
     return figure

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import plotly.graph_objects as go
 
-from lmpgap.report.figures.base import floats, labels, picture, time_axis
+from lmpgap.report.figures.base import floats, labels, money_unit, picture, time_axis
 from lmpgap.report.palette import ABOVE, BELOW, DEAD_BAND, LEVEL, LIGHT, diverging
 from lmpgap.report.text import number
 from lmpgap.report.view.cube import Matrix
@@ -65,7 +65,7 @@ def network_map(view: WeeklyView, hour: int) -> go.Figure:
                 for name, zone, value in zip(labels(nodes.name), labels(nodes.zone), values, strict=True)
             ],
             hovertemplate="<b>%{customdata[0]}</b><br>%{customdata[1]}<br>%{customdata[2]} "
-            + f"{view.currency}/MWh<extra></extra>",
+            + f"{money_unit(view.currency)}/MWh<extra></extra>",
             marker={
                 "symbol": sign_symbols(values),
                 "size": marker_sizes(values, bound, nodes.n),
@@ -86,7 +86,7 @@ def network_map(view: WeeklyView, hour: int) -> go.Figure:
                     "outlinewidth": 0,
                     "tickfont": {"color": LIGHT["soft"], "size": 11},
                     "title": {
-                        "text": f"{view.currency}/MWh",
+                        "text": f"{money_unit(view.currency)}/MWh",
                         "side": "right",
                         "font": {"color": LIGHT["soft"], "size": 11},
                     },

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import plotly.graph_objects as go
 
-from lmpgap.report.figures.base import floats, labels, picture
+from lmpgap.report.figures.base import floats, labels, money_unit, picture
 from lmpgap.report.palette import LIGHT, colour
 from lmpgap.report.text import number
 from lmpgap.report.view.cube import COMPONENTS
@@ -97,7 +97,7 @@ def waterfall(view: WeeklyView, bus: int, hour: int) -> go.Figure:
     low, high = float(levels.min()), float(levels.max())
     room = max(0.18 * (high - low), 0.4)
     figure.update_xaxes(categoryorder="array", categoryarray=categories, tickfont={"color": LIGHT["ink"], "size": 13})
-    figure.update_yaxes(title_text=f"{view.currency}/MWh", range=[low - room, high + 1.6 * room])
+    figure.update_yaxes(title_text=f"{money_unit(view.currency)}/MWh", range=[low - room, high + 1.6 * room])
     return figure
 
 
@@ -138,7 +138,7 @@ def ladder(view: WeeklyView) -> go.Figure:
         )
     figure.update_layout(barmode="stack", bargap=0.45)
     figure.update_yaxes(autorange="reversed", tickfont={"color": LIGHT["ink"], "size": 13}, showgrid=False, ticks="")
-    figure.update_xaxes(title_text=f"mean size of each driver, {view.currency}/MWh", showgrid=True)
+    figure.update_xaxes(title_text=f"mean size of each driver, {money_unit(view.currency)}/MWh", showgrid=True)
     return figure
 
 
@@ -171,7 +171,7 @@ def hub_components(view: WeeklyView) -> go.Figure:
     figure.update_layout(barmode="relative", bargap=0.3)
     figure.update_yaxes(autorange="reversed", showgrid=False, ticks="", dividercolor=LIGHT["rule"])
     figure.update_xaxes(
-        title_text=f"{view.currency}/MWh",
+        title_text=f"{money_unit(view.currency)}/MWh",
         showgrid=True,
         zeroline=True,
         zerolinecolor=LIGHT["soft"],

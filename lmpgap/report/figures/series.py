@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import plotly.graph_objects as go
 
-from lmpgap.report.figures.base import floats, hour_line, labels, picture, time_axis
+from lmpgap.report.figures.base import floats, hour_line, labels, money_unit, picture, time_axis
 from lmpgap.report.palette import DASH, LIGHT, SYMBOL, colour
 from lmpgap.report.view.model import WeeklyView
 from lmpgap.report.view.trust import USABLE
@@ -89,7 +89,7 @@ def shadow_timeline(view: WeeklyView, constraint: int, hour: int) -> go.Figure:
         )
     time_axis(figure, view.hours)
     unit = view.constraints.unit[constraint] or "unit"
-    figure.update_yaxes(title_text=f"{view.currency} per {unit} and hour", rangemode="tozero")
+    figure.update_yaxes(title_text=f"{money_unit(view.currency)} per {unit} and hour", rangemode="tozero")
     figure.update_layout(hovermode="x unified")
     return figure
 

@@ -168,7 +168,7 @@ function shorten(text, limit) {
 
 // A name inside a plotly label: its tags disarmed, its direction kept to itself.
 function plotText(text, limit = 36) {
-  const clean = shorten(text, limit).replaceAll("&", "&amp;").replaceAll("<", "&lt;").replaceAll(">", "&gt;");
+  const clean = shorten(text, limit).replaceAll("&", "&amp;").replaceAll("<", "&lt;").replaceAll(">", "&gt;").replaceAll("$", "&#36;");
   // eslint-disable-next-line no-control-regex
   return /^[\x00-\x7f]*$/.test(clean) ? clean : `\u2068${clean}\u2069`;
 }

@@ -219,7 +219,7 @@ const fill = {
     Object.values(shadow).forEach((reference, i) => {
       spec.data[i].y = expand(reference, name.length).subarray(choice.constraint * nHour, (choice.constraint + 1) * nHour);
     });
-    spec.layout.yaxis.title.text = `${page.currency} per ${unit[choice.constraint] || "unit"} and hour`;
+    spec.layout.yaxis.title.text = `${plotText(page.currency, 12)} per ${unit[choice.constraint] || "unit"} and hour`;
     return name[choice.constraint];
   },
 
