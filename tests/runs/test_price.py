@@ -215,6 +215,29 @@ def test_a_killed_run_goes_on_where_it_stopped(tmp_path: Path, count_solves: lis
     assert_same(RunFolder(tmp_path / "run"), price(read_scenario(scenario), tmp_path / "fresh", formulations=FAST))
 
 
+def test_a_clock_set_back_during_a_run_changes_nothing(
+    scenario: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Keys and progress do not look at the wall clock; it only dates the manifest."""
+    from datetime import UTC, datetime
+
+    from lmpgap.runs import price as price_module
+
+    moments = iter([datetime(2026, 11, 1, 8, 30, tzinfo=UTC), datetime(2025, 1, 1, tzinfo=UTC)])
+
+    class Clock(datetime):
+        @classmethod
+        def now(cls, tz=None):
+            return next(moments)
+
+    monkeypatch.setattr(price_module, "datetime", Clock)
+    price(read_scenario(scenario), tmp_path / "run", formulations=("dc",))
+    later = price(read_scenario(scenario), tmp_path / "run", formulations=FAST)
+    monkeypatch.undo()
+    assert later.manifest["updated"].startswith("2025-01-01")
+    assert_same(later, price(read_scenario(scenario), tmp_path / "fresh", formulations=FAST))
+
+
 def _die_once(marker: str) -> None:
     """Kill this worker the first time it is asked to solve."""
     if not os.path.exists(marker):
