@@ -148,7 +148,9 @@ def compare_all(scenario: Scenario, folder: RunFolder, extra: Sequence[PriceSet]
     )
 
 
-def compare_one(folder: RunFolder, base: str, against: str, scenario: str | Path | None = None) -> Comparison:
+def compare_one(
+    folder: RunFolder, base: str, against: str, scenario: Scenario | str | Path | None = None
+) -> Comparison:
     """Compare one pair of price sets of a run and store it beside the pairs that are there.
 
     Parameters
@@ -156,7 +158,7 @@ def compare_one(folder: RunFolder, base: str, against: str, scenario: str | Path
     base, against
         A formulation of the run, or ``"posted"``.
     scenario
-        The run's scenario, if it moved since.
+        The run's scenario or its folder; read from where the run found it by default.
 
     Raises
     ------
@@ -172,7 +174,7 @@ def compare_one(folder: RunFolder, base: str, against: str, scenario: str | Path
     extra: tuple[PriceSet, ...] = ()
     read: Scenario | None = None
     if POSTED in (base, against):
-        read = read_scenario(scenario or folder.scenario_folder)
+        read = scenario if isinstance(scenario, Scenario) else read_scenario(scenario or folder.scenario_folder)
         posted = check_posted(read, {"operating_point": folder.table("operating_point")}).prices
         if posted is None:
             raise DataError(f"the scenario in {read.folder} has no posted prices of known nodes")

@@ -110,9 +110,14 @@ def compare(
     Example: lmpgap compare runs/demo --base dc --against ac
     """
     from lmpgap.runs.folder import RunFolder
+    from lmpgap.scenario.read import read_scenario
     from lmpgap.weekly import compare_one
 
-    rankings = compare_one(RunFolder(run), base, against, scenario=scenario).rankings(top)
+    folder = RunFolder(run)
+    read = read_scenario(scenario or folder.scenario_folder)
+    rankings = compare_one(folder, base, against, read).rankings(
+        top, positions=read.tables["positions"], hours=read.settings.hours, hubs=read.tables["hubs"]
+    )
     if json:
         echo_json({"base": base, "against": against, **{name: records(frame) for name, frame in rankings.items()}})
         return

@@ -13,7 +13,7 @@ from lmpgap.divergence.differences import differences
 from lmpgap.divergence.drivers import drivers
 from lmpgap.divergence.price_set import PriceSet, common_ground
 from lmpgap.divergence.price_tables import price_set
-from lmpgap.divergence.ranking import rank_buses, rank_constraints, rank_intervals
+from lmpgap.divergence.ranking import rank_buses, rank_constraints, rank_intervals, rank_money
 from lmpgap.errors import DataError
 from lmpgap.scenario.network import FloatArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
@@ -39,14 +39,33 @@ class Comparison:
     drivers: pd.DataFrame
     own_reference: pd.DatetimeIndex
 
-    def rankings(self, most: int = 10) -> dict[str, pd.DataFrame]:
-        """Return the largest divergences by bus, interval and constraint, each with at most so many rows."""
-        count = len(self.differences)
-        return {
+    def rankings(
+        self,
+        most: int = 10,
+        *,
+        positions: pd.DataFrame | None = None,
+        hours: float = 1.0,
+        hubs: pd.DataFrame | None = None,
+    ) -> dict[str, pd.DataFrame]:
+        """Return the largest divergences by bus, interval, constraint and money, each with at most so many rows.
+
+        Parameters
+        ----------
+        positions
+            Table ``positions``; without any the ranking by money is left out.
+        hours
+            Length of one interval [h].
+        hubs
+            Table ``hubs``, for positions at hubs.
+        """
+        found = {
             "buses": rank_buses(self.differences).head(most),
             "intervals": rank_intervals(self.differences).head(most),
-            "constraints": rank_constraints(self.drivers, count).head(most),
+            "constraints": rank_constraints(self.drivers, len(self.differences)).head(most),
         }
+        if positions is not None and not positions.empty:
+            found["positions"] = rank_money(self.differences, positions, hours, hubs).head(most)
+        return found
 
 
 class RunTables(Protocol):
