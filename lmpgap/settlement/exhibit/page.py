@@ -13,8 +13,14 @@ from jinja2 import Environment, PackageLoader, StrictUndefined, Template
 from lmpgap.settlement.exhibit.statement import largest_rows
 from lmpgap.settlement.options import FACTOR_COMPONENT
 
+ACCOUNTS_SHOWN = 8
 LARGEST_ROWS = 8
-ACCOUNTS_SHOWN = 10
+BASELINES_SHOWN = 8
+REASONS_SHOWN = 4
+"""What one page of A4 holds; each account beyond the third takes the place of one of the largest rows."""
+
+NAME_LENGTH = 42
+"""Longer names are shortened on the page; the tables have them in full."""
 
 READINGS = {
     FACTOR_COMPONENT: "delivery factors, posted energy price",
@@ -46,7 +52,9 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
     totals = [row for row in statement["totals"] if row["component"] == basis]
     totals.sort(key=lambda row: -abs(row["amount"]))
     deadlines = _first_deadlines(statement["deadlines"])
-    largest = largest_rows(rows, basis, LARGEST_ROWS)
+    left_out = [row for row in statement["left_out"] if row["component"] == basis]
+    shown = min(len(totals), ACCOUNTS_SHOWN)
+    largest = largest_rows(rows, basis, LARGEST_ROWS - max(0, shown - 3))
     return {
         "statement": statement,
         "currency": statement["scenario"]["currency"],
@@ -54,7 +62,7 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
         "readings": READINGS,
         "accounts": [
             {
-                "name": row["account"],
+                "name": short(row["account"]),
                 "amount": money(row["amount"]),
                 "worst": span(row["amount_low"], row["amount_high"]),
                 "likely": span(row["independent_low"], row["independent_high"]),
@@ -69,9 +77,9 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
         "sentences": [_sentence(row, statement) for row in totals[:3]],
         "largest": [
             {
-                "account": row["account"],
+                "account": short(row["account"]),
                 "hour": row["hour_ending"],
-                "node": row["node"],
+                "node": short(row["node"]),
                 "mw": f"{row['mw']:,.1f}",
                 "posted": f"{row['posted']:.3f}",
                 "reference": f"{row['reference']:.3f}",
@@ -83,15 +91,13 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
         ],
         "baselines": [
             {
-                "account": row["account"],
+                "account": short(row["account"]),
                 "reading": READINGS[row["component"]],
                 "against": row["against"],
                 "amount": money(row["amount"]),
                 "worst": span(row["amount_low"], row["amount_high"]),
             }
-            for total in totals[:2]
-            for row in statement["baselines"]
-            if row["account"] == total["account"]
+            for row in _baselines(statement["baselines"], totals)
         ],
         "certificate": [
             {
@@ -103,11 +109,28 @@ def _view(statement: Mapping[str, Any], rows: pd.DataFrame) -> dict[str, Any]:
             }
             for row in statement["certificate"]
         ],
-        "left_out": statement["left_out"],
+        "left_out": left_out[:REASONS_SHOWN],
+        "left_out_more": max(0, len(left_out) - REASONS_SHOWN),
         "hashes": [{"name": name, "short": digest[:12]} for name, digest in sorted(statement["inputs"].items())],
         "settings": [{"name": name, "value": value} for name, value in flattened(statement["run_settings"])],
         "chosen": [{"name": name, "value": _text(value)} for name, value in statement["options"].items()],
     }
+
+
+def _baselines(baselines: list[dict[str, Any]], totals: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """Return the baselines of the accounts with the largest amounts, as many accounts as fit, one at least."""
+    chosen: list[dict[str, Any]] = []
+    for total in totals:
+        own = [row for row in baselines if row["account"] == total["account"]]
+        if chosen and len(chosen) + len(own) > BASELINES_SHOWN:
+            break
+        chosen += own
+    return chosen
+
+
+def short(name: str) -> str:
+    """Return a name that fits a line; a long one loses its middle, so that names that differ at either end still do."""
+    return name if len(name) <= NAME_LENGTH else f"{name[: NAME_LENGTH - 17]}…{name[-16:]}"
 
 
 def money(value: float | None) -> str:
@@ -153,7 +176,7 @@ def _sentence(row: Mapping[str, Any], statement: Mapping[str, Any]) -> dict[str,
         sure = f"at least {money(bounds[0])} and at most {money(bounds[1])} {currency}"
     verdict = "Material." if row["material"] else "Not material."
     return {
-        "name": row["account"],
+        "name": short(row["account"]),
         "rest": f"{size} to the account's {side}, {sure}. {verdict}",
     }
 
@@ -192,6 +215,7 @@ def _template(name: str) -> Template:
         keep_trailing_newline=True,
     )
     environment.filters["markdown_text"] = markdown_text
+    environment.filters["short"] = short
     return environment.get_template(name)
 
 
