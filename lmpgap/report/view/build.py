@@ -32,12 +32,18 @@ from lmpgap.report.view.posted import latest_posted, posted_matrices
 from lmpgap.report.view.prose import CAUTIONS, conventions
 from lmpgap.report.view.stakes import (
     account_totals,
+    deadlines_table,
     exposure_table,
     findings_table,
+    rights_table,
     settlement_table,
     stakes_table,
 )
 from lmpgap.report.view.trust import USABLE, trust_view
+from lmpgap.settlement.result import Settlement
+
+_HASHES = ("inputs", "hashes", "sha256")
+"""Parts of a manifest that the section on inputs shows already."""
 
 
 def build_view(
@@ -46,6 +52,7 @@ def build_view(
     manifest: Mapping[str, Any],
     sentences: Sequence[str],
     posted: PriceSet | None = None,
+    settlement: Settlement | None = None,
 ) -> WeeklyView:
     """Return everything the weekly report shows.
 
@@ -62,6 +69,8 @@ def build_view(
         What happened this week, in words with figures.
     posted
         Posted prices as the checks left them (signs put right); without it the scenario's own table is taken.
+    settlement
+        The settled claims, with deadlines and rights; without it the run table is summed.
 
     Raises
     ------
@@ -89,7 +98,7 @@ def build_view(
         for key in dict.fromkeys((*pair_keys(cube, checked["differences"]), *ladder_keys(cube)))
     }
     main = next(iter(views.values()))
-    accounts = account_totals(checked["settlement"])
+    accounts = account_totals(checked["settlement"], settlement)
     trust = trust_view(checked["solves"], checked["prices"], cube, hours)
     exposure = exposure_table(cube, checked["operating_point"], nodes, hours, currency, settings.hours)
     return WeeklyView(
@@ -120,6 +129,9 @@ def build_view(
         audit=audit_table(checked["audit"], hours),
         findings=findings_table(checked["findings"], hours),
         settlement=settlement_table(checked["settlement"], currency),
+        deadlines=deadlines_table(settlement, currency),
+        rights=rights_table(settlement, currency),
+        settlement_notes=() if settlement is None else settlement.notes,
         sweep=sweep_view(checked["sweep"], currency),
         trust=trust,
         conventions=conventions(settings),
@@ -206,13 +218,12 @@ def _produced_by(manifest: Mapping[str, Any]) -> tuple[tuple[str, str], ...]:
     def walk(prefix: str, value: Any) -> None:
         if isinstance(value, Mapping):
             for key, inner in value.items():
-                walk(f"{prefix}.{key}" if prefix else str(key), inner)
+                if key not in _HASHES:
+                    walk(f"{prefix}.{key}" if prefix else str(key), inner)
         elif isinstance(value, (list, tuple)):
             lines.append((prefix, ", ".join(str(item) for item in value)))
         else:
             lines.append((prefix, str(value)))
 
-    for key, value in manifest.items():
-        if key not in ("inputs", "hashes"):
-            walk(str(key), value)
+    walk("", manifest)
     return tuple(lines)

@@ -224,12 +224,16 @@ class SweepView:
 
 @dataclass(frozen=True, kw_only=True)
 class AccountTotal:
-    """Money of one account over the week [currency], with its interval."""
+    """Money of one account over the week [currency], with its interval.
+
+    ``material`` is ``None`` where no threshold was applied.
+    """
 
     account: str
     amount: float
     low: float
     high: float
+    material: bool | None = None
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -286,6 +290,9 @@ class WeeklyView:
     audit: Table
     findings: Table
     settlement: Table
+    deadlines: Table
+    rights: Table
+    settlement_notes: tuple[str, ...]
     sweep: SweepView | None
     trust: TrustView
     conventions: tuple[tuple[str, str], ...]

@@ -6,37 +6,52 @@ import numpy as np
 import pandas as pd
 
 from lmpgap.report.text import NO_VALUE, number
-from lmpgap.report.view.cube import POSTED, PriceCube
+from lmpgap.report.view.cube import PriceCube
 from lmpgap.report.view.hours import Hours
 from lmpgap.report.view.model import AccountTotal, Table
 from lmpgap.report.view.nodes import Nodes
 from lmpgap.scenario.network import FloatArray
+from lmpgap.settlement.result import Settlement
 
 _ROWS = 30
 
 
-def account_totals(settlement: pd.DataFrame, component: str = "loss") -> tuple[AccountTotal, ...]:
-    """Return each account's week total of one component, the largest size first.
+def account_totals(table: pd.DataFrame, settlement: Settlement | None) -> tuple[AccountTotal, ...]:
+    """Return what each account has at stake in the loss component over the week, the largest size first.
 
-    ``component`` is matched at the start of the table's wording, so that ``loss`` finds ``loss_component`` too;
-    all rows count where no row bears it.
+    Parameters
+    ----------
+    table
+        Run table ``settlement``; summed row by row where there is no settlement.
+    settlement
+        The claims as they were settled, with the intervals and the materiality that belong to a whole week.
     """
-    if settlement.empty:
-        return ()
-    chosen = settlement[settlement["component"].astype(str).str.startswith(component)]
-    frame = chosen if len(chosen) else settlement
-    sums = frame.assign(account=frame["account"].astype(str)).groupby("account")[
-        ["amount", "amount_low", "amount_high"]
-    ]
-    totals = sums.sum(min_count=1)
-    figures = totals.to_numpy(dtype=float)
-    names = [str(account) for account in totals.index]
+    if settlement is not None:
+        claims = settlement.claims
+        figures = claims[["amount", "amount_low", "amount_high"]].to_numpy(dtype=float)
+        names = [str(account) for account in claims["account"]]
+        material: list[bool | None] = [bool(flag) for flag in claims["material"]]
+    else:
+        if table.empty:
+            return ()
+        present = set(table["component"].astype(str))
+        basis = next((name for name in ("delivery-factor", "loss") if name in present), None)
+        frame = table if basis is None else table[table["component"].astype(str) == basis]
+        totals = (
+            frame.assign(account=frame["account"].astype(str))
+            .groupby("account")[["amount", "amount_low", "amount_high"]]
+            .sum(min_count=1)
+        )
+        figures = totals.to_numpy(dtype=float)
+        names = [str(account) for account in totals.index]
+        material = [None] * len(names)
     return tuple(
         AccountTotal(
             account=names[row],
             amount=float(figures[row, 0]),
             low=float(figures[row, 1]),
             high=float(figures[row, 2]),
+            material=material[row],
         )
         for row in np.argsort(-np.abs(figures[:, 0]), kind="stable")
     )
@@ -50,7 +65,8 @@ def stakes_table(accounts: tuple[AccountTotal, ...], currency: str) -> Table:
             number(total.amount, 0, signed=True),
             number(total.low, 0, signed=True),
             number(total.high, 0, signed=True),
-            "charged too much" if total.low > 0 else "charged too little" if total.high < 0 else "not certain",
+            ("charged too much" if total.low > 0 else "charged too little" if total.high < 0 else "not certain")
+            + {True: ", material", False: ", not material", None: ""}[total.material],
         )
         for total in accounts[:_ROWS]
     )
@@ -196,6 +212,50 @@ def settlement_table(settlement: pd.DataFrame, currency: str) -> Table:
     )
 
 
-def has_posted(cube: PriceCube) -> bool:
-    """Return whether posted prices take part."""
-    return POSTED in cube.sets
+def deadlines_table(settlement: Settlement | None, currency: str) -> Table:
+    """Return until when each account may dispute, by the analyst's own rule: first and last deadline of the week."""
+    rows = []
+    note = ""
+    if settlement is not None and settlement.rule is not None and not settlement.deadlines.empty:
+        note = settlement.rule.sentence
+        for account, part in settlement.deadlines.groupby("account", sort=False):
+            ordered = part.sort_values("deadline", kind="stable")
+            first = ordered.iloc[0]
+            same = ordered["deadline"] == first["deadline"]
+            left = first["days_left"]
+            rows.append(
+                (
+                    str(account),
+                    f"{first['deadline']}",
+                    "" if pd.isna(left) else f"{int(left)}",
+                    number(float(ordered.loc[same, "amount"].sum()), 0, signed=True),
+                    f"{ordered.iloc[-1]['deadline']}",
+                    number(float(ordered["amount"].sum()), 0, signed=True),
+                )
+            )
+    return Table(
+        caption=f"Days left to dispute, {currency}",
+        columns=("Account", "First deadline", "Days left", "Amount then", "Last deadline", "Whole week"),
+        numeric=(False, True, True, True, True, True),
+        rows=tuple(rows),
+        note=note,
+    )
+
+
+def rights_table(settlement: Settlement | None, currency: str) -> Table:
+    """Return what rights are paid on posted and on recomputed congestion, and the losses they leave open."""
+    rows: list[tuple[str, ...]] = []
+    if settlement is not None:
+        columns = ["amount_posted", "amount_reference", "difference", "losses_left_open"]
+        figures = settlement.holders[columns].to_numpy(dtype=float)
+        rows = [
+            (str(holder), *(number(value, 0, signed=True) for value in line))
+            for holder, line in zip(settlement.holders["holder"], figures, strict=True)
+        ]
+    return Table(
+        caption=f"Rights, {currency} over the week",
+        columns=("Holder", "Paid as posted", "Paid on recomputed congestion", "Difference", "Losses left open"),
+        numeric=(False, True, True, True, True),
+        rows=tuple(rows[:_ROWS]),
+        note="Rights are settled on congestion components; what losses cost between their ends stays open.",
+    )
