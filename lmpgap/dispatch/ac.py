@@ -20,6 +20,7 @@ from lmpgap.dispatch.ac_interval import (
     flat_start,
     interval_vectors,
     start_from,
+    working_bounds,
 )
 from lmpgap.dispatch.ac_layout import AcShape
 from lmpgap.dispatch.ac_model import AcProgram
@@ -58,6 +59,9 @@ _INFEASIBLE_TWICE = 2
 
 _MOST_ITERATIONS = 600
 """Per attempt: networks of 10,000 buses take fewer than 100, and a solve that wanders should not hold up a week."""
+
+_WIDENED = 1e3
+"""Factor on the working ranges of unlimited outputs where the first ones held an output back."""
 
 _PROGRAMS_KEPT = 4
 """Programs kept per topology: the plain one, and the latest sets of added flow limits."""
@@ -194,7 +198,7 @@ class AcDispatch:
                 if attempt.from_start and given is not None
                 else flat_start(program, vectors)
             )
-            status, words, solution, spent = _run(program, vectors, x, attempt)
+            status, words, solution, spent = _run(program, vectors, inputs, x, attempt)
             seconds += spent
             if solution is not None:
                 best = status, words, solution
@@ -318,17 +322,44 @@ class AcDispatch:
 
 
 def _run(
-    program: AcProgram, vectors: AcVectors, x: FloatArray, attempt: Attempt
+    program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, x: FloatArray, attempt: Attempt
 ) -> tuple[SolveStatus, str, AcSolution | None, float]:
     """Return the status, the solver's words, the solution where there is one, and the solver's seconds."""
+    seconds = 0.0
+    for widened in (1.0, _WIDENED):
+        bounds = working_bounds(program, vectors, inputs, widened)
+        status, words, solution, spent = _call(program, vectors, bounds, x, attempt)
+        seconds += spent
+        if solution is None or not _held_by_working_bounds(vectors, bounds, solution.x):
+            break
+    return status, words, solution, seconds
+
+
+def _held_by_working_bounds(vectors: AcVectors, bounds: tuple[FloatArray, FloatArray], x: FloatArray) -> bool:
+    """Return whether a bound that is none of the dispatch's stands in the way."""
+    lower, upper = bounds
+    half = 0.5 * (upper - lower)  # the middle half of a working range is well inside it
+    low = np.isinf(vectors.lower) & np.isfinite(lower) & (x - lower < 0.5 * half)
+    high = np.isinf(vectors.upper) & np.isfinite(upper) & (upper - x < 0.5 * half)
+    return bool(np.any(low | high))
+
+
+def _call(
+    program: AcProgram,
+    vectors: AcVectors,
+    bounds: tuple[FloatArray, FloatArray],
+    x: FloatArray,
+    attempt: Attempt,
+) -> tuple[SolveStatus, str, AcSolution | None, float]:
+    lower, upper = bounds
     solver = program.solver({"max_iter": _MOST_ITERATIONS, **attempt.settings})
     began = time.perf_counter()
     try:
         answer = solver(
             x0=x,
             p=vectors.parameter,
-            lbx=vectors.lower,
-            ubx=np.maximum(vectors.lower, vectors.upper),
+            lbx=lower,
+            ubx=np.maximum(lower, upper),
             lbg=vectors.row_lower,
             ubg=np.maximum(vectors.row_lower, vectors.row_upper),
         )

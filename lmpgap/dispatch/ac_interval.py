@@ -12,6 +12,9 @@ from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.scenario.network import FloatArray, IntervalInputs, OfferSegments
 
+_WORKING_RANGE = 10.0
+"""Unlimited reactive outputs are kept within this multiple of all load and charging while solving."""
+
 _ROOM = 1e-9
 """Bounds that cross by less than this are rounding, not a contradiction [pu]."""
 
@@ -97,6 +100,29 @@ def interval_vectors(
         target = np.concatenate([movement.p - inputs.p_min, movement.bid_served])
         row_lower[rows["movement"]] = row_upper[rows["movement"]] = target
     return AcVectors(lower=lower, upper=upper, row_lower=row_lower, row_upper=row_upper, parameter=parameter)
+
+
+def working_bounds(
+    program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, widened: float = 1.0
+) -> tuple[FloatArray, FloatArray]:
+    """Return bounds for the solver in which every reactive output has a finite range, shape (n_var,) each.
+
+    Two unlimited outputs at one bus, or a network without resistance, leave a direction along which neither cost nor
+    balance changes. A barrier on a wide range gives it a curvature; without one the iterates drift off along it.
+
+    Parameters
+    ----------
+    widened
+        Factor on the range, for another try where it turned out to hold.
+    """
+    network, place = program.network, program.layout.variables["q"]
+    size = float(np.sum(np.abs(inputs.load_p)) + np.sum(np.abs(inputs.load_q)) + np.sum(np.abs(network.charging)))
+    span = _WORKING_RANGE * widened * (1.0 + size)
+    lower, upper = vectors.lower.copy(), vectors.upper.copy()
+    low, high = vectors.lower[place], vectors.upper[place]
+    lower[place] = np.where(np.isneginf(low), np.minimum(high, 0.0) - span, low)
+    upper[place] = np.where(np.isposinf(high), np.maximum(low, 0.0) + span, high)
+    return lower, upper
 
 
 def segment_slope(segments: OfferSegments) -> FloatArray:

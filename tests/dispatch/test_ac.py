@@ -15,6 +15,7 @@ from lmpgap.dispatch.result import ConstraintRows, DispatchResult, SolveStatus
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import BidSegments, IntervalInputs, Network, OfferSegments
 from lmpgap.scenario.settings import Penalties
+from tests.dispatch import grids
 from tests.dispatch.small_networks import two_bus
 from tests.support.networks import load_network, scale_load
 
@@ -446,3 +447,36 @@ def test_start_from_a_solution_reaches_the_same_optimum() -> None:
     warm = solve(network, inputs, start=flat)
     assert warm.objective == pytest.approx(flat.objective, rel=1e-7)
     np.testing.assert_allclose(prices(network, warm), prices(network, flat), atol=1e-3)
+
+
+@pytest.mark.parametrize("load", [600.0, 711.8, 1137.02])
+@pytest.mark.parametrize("start", ["flat", "soc"])
+def test_unlimited_reactive_outputs_on_a_lossless_network(load: float, start: str) -> None:
+    # Two units with unlimited reactive output stand at bus A: moving reactive output from one to the other changes
+    # nothing, and without resistance little else does.
+    network, inputs = grids.five_bus_growth(load)
+    network = replace(network, v_min=np.full(5, 0.9), v_max=np.full(5, 1.1))
+    cone = grids.solve("soc", network, inputs)
+    dispatch = AcDispatch(network, inputs.branch_in_service, DispatchOptions())
+    result = dispatch.solve(inputs, FlowLimits.none(network.n_branch), cone if start == "soc" else None)
+    assert result.status is SolveStatus.LOCALLY_OPTIMAL
+    assert result.notes == ()  # at the first attempt
+    # Enough voltage range for every flow: nothing tells the network from its relaxation.
+    assert result.objective == pytest.approx(cone.objective, rel=1e-8)
+    assert result.residuals.dual / network.base_mva < 1e-5
+    assert not any(kind == "reactive" for kind in result.constraints.kind)
+
+
+def test_a_working_range_that_holds_an_output_back_is_widened(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("lmpgap.dispatch.ac_interval._WORKING_RANGE", 0.16)
+    network, inputs = two_bus(r=0.01, x=0.1, v=((0.9, 1.1), (0.9, 1.1)))
+    free = replace(network, q_min=np.full(network.n_resource, -np.inf), q_max=np.full(network.n_resource, np.inf))
+    dispatch = AcDispatch(free, inputs.branch_in_service, DispatchOptions())
+    held = replace(inputs, load_q=np.array([0.0, 0.5]))
+    narrow = dispatch.solve(held, FlowLimits.none(1))
+    monkeypatch.undo()
+    usual = dispatch.solve(held, FlowLimits.none(1))
+    assert narrow.status is usual.status is SolveStatus.LOCALLY_OPTIMAL
+    assert np.max(np.abs(usual.q)) > 0.16 * (1.0 + np.sum(np.abs(held.load_p)) + np.sum(np.abs(held.load_q)))
+    assert narrow.objective == pytest.approx(usual.objective, rel=1e-8)
+    assert narrow.q == pytest.approx(usual.q, abs=1e-6)
