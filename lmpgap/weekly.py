@@ -119,6 +119,7 @@ def weekly_report(
             drivers=comparison.drivers,
             findings=check.findings,
             claims=None if settlement is None else settlement.claims,
+            other_claims=None if settlement is None else _other_claims(settlement),
             currency=currency_sign(scenario),
             wording=wording(scenario),
         )
@@ -229,6 +230,13 @@ def settle_run(scenario: Scenario, folder: RunFolder, today: date | None = None)
         folder.write("settlement", RUN_TABLES["settlement"].empty())
         return None
     return settle(folder, scenario, POSTED, against, today=today)
+
+
+def _other_claims(settlement: Settlement) -> dict[str, pd.DataFrame]:
+    """Return the claims held against the linear dispatch with losses, which is what a market clears."""
+    own = settlement.baselines[settlement.baselines["component"] == settlement.options.basis]
+    others = {name: own[own["against"] == name] for name in ("dc-loss",) if name != settlement.against}
+    return {name: frame for name, frame in others.items() if len(frame)}
 
 
 def reference_weights(scenario: Scenario) -> pd.DataFrame:

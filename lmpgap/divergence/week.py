@@ -21,6 +21,7 @@ def weekly_sentences(
     drivers: pd.DataFrame,
     findings: pd.DataFrame,
     claims: pd.DataFrame | None = None,
+    other_claims: dict[str, pd.DataFrame] | None = None,
     currency: str = "$",
     wording: Wording | None = None,
 ) -> list[str]:
@@ -33,6 +34,8 @@ def weekly_sentences(
     claims
         Loss-component error per account: account, amount, amount_low, amount_high [currency], material. ``None`` where
         there was nothing to settle.
+    other_claims
+        The same held against other formulations, by name: how far the figure depends on what it is held against.
     currency
         Sign or code before amounts.
     """
@@ -42,7 +45,7 @@ def weekly_sentences(
         _furthest(differences, drivers, wording),
         _cause(differences, drivers, wording),
         _posted(differences, findings, wording),
-        _money(claims, currency),
+        _money(claims, other_claims or {}, currency),
     ]
 
 
@@ -67,7 +70,7 @@ def _closeness(prices: pd.DataFrame, solves: pd.DataFrame, wording: Wording) -> 
     )
     best = errors["formulation"].iloc[0]
     hours = int(errors["intervals"].iloc[0])
-    return f"Over {hours} hours {best} stayed closest to ac; on average prices missed it: {told}; {trust}."
+    return f"Over {_hours(hours)} {best} stayed closest to ac; on average prices missed it: {told}; {trust}."
 
 
 def _main_pair(differences: pd.DataFrame) -> tuple[str, str] | None:
@@ -115,7 +118,7 @@ def _cause(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording) -
     top = constraints.iloc[0]
     return (
         f"{text}; the limit that matters most is {wording.name(str(top['constraint']))} "
-        f"({top['mean_absolute']:,.2f} on average, in {int(top['intervals'])} hours)."
+        f"({top['mean_absolute']:,.2f} on average, in {_hours(int(top['intervals']))})."
     )
 
 
@@ -142,14 +145,20 @@ def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording)
     )
 
 
-def _money(claims: pd.DataFrame | None, currency: str) -> str:
+def _hours(count: int) -> str:
+    return "1 hour" if count == 1 else f"{count} hours"
+
+
+def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currency: str) -> str:
     if claims is None or claims.empty:
         return "There are no positions to settle."
     order = claims["amount"].abs().sort_values(ascending=False, kind="stable").index
     largest = claims.loc[order].head(3)
     figures = largest[["amount", "amount_low", "amount_high"]].to_numpy(float).tolist()
     told = "; ".join(
-        f"{account} {_amount(amount, currency)} (between {_amount(low, currency)} and {_amount(high, currency)})"
+        f"{account} {_amount(amount, currency)} (between {_amount(low, currency)} and {_amount(high, currency)}"
+        + "".join(_against(account, name, frame, currency) for name, frame in others.items())
+        + ")"
         for account, (amount, low, high) in zip(largest["account"], figures, strict=True)
     )
     material = int(claims["material"].sum())
@@ -159,6 +168,11 @@ def _money(claims: pd.DataFrame | None, currency: str) -> str:
         else f"{material} of {len(claims)} account{'s' if len(claims) > 1 else ''} can claim a material amount"
     )
     return f"Loss component at stake, positive to the account's disadvantage: {told}; {verdict}."
+
+
+def _against(account: str, name: str, claims: pd.DataFrame, currency: str) -> str:
+    mine = claims.loc[claims["account"] == account, "amount"]
+    return f"; against {name} {_amount(float(mine.iloc[0]), currency)}" if len(mine) else ""
 
 
 def _amount(value: float, currency: str) -> str:
