@@ -188,7 +188,7 @@ def make_pictures(view: WeeklyView) -> dict[str, Picture]:
             Picture(
                 slot="sweep",
                 title="How the error grows with load",
-                reading="Every load of the week scaled by one factor, then solved again.",
+                reading="Every load scaled by one factor, then solved again; the scale is logarithmic.",
                 alternative="Mean price error against AC by load factor and formulation.",
                 figure=loading_sweep(view, view.sweep),
                 key_figures=view.sweep.table,

@@ -140,6 +140,6 @@ def sweep_errors(factor: FloatArray, errors: Mapping[str, FloatArray], currency:
             )
         )
     figure.update_xaxes(title_text="load, multiple of the scenario's", showgrid=True)
-    figure.update_yaxes(title_text=f"mean error against ac, {money_unit(currency)}/MWh", rangemode="tozero")
+    figure.update_yaxes(title_text=f"mean error against ac, {money_unit(currency)}/MWh", type="log", dtick=1)
     figure.update_layout(hovermode="x unified", showlegend=True)
     return figure

@@ -6,11 +6,12 @@ import numpy as np
 import pandas as pd
 
 from lmpgap.report.text import NO_VALUE, number, percent
-from lmpgap.report.view.cube import COMPONENTS, LADDER, POSTED, PriceCube
+from lmpgap.report.view.cube import COMPONENTS, LADDER, POSTED, Matrix, PriceCube
 from lmpgap.report.view.hours import Hours
 from lmpgap.report.view.model import FactorsView, HubView, LossesView, SweepView, Table
 from lmpgap.report.view.nodes import Hubs, Nodes
-from lmpgap.scenario.network import FloatArray
+from lmpgap.scenario.network import BoolArray, FloatArray
+from lmpgap.tolerances import DEFAULT_TOLERANCES
 
 MOST_POINTS = 4000
 """Points of the delivery-factor picture; more are thinned evenly."""
@@ -107,8 +108,9 @@ def factors_view(cube: PriceCube, findings: pd.DataFrame, nodes: Nodes, hours: H
     if not findings.empty:
         part = findings[findings["kind"].astype(str) == "stale-factors"]
         row, column = nodes.position(part["node"]), hours.position(part["interval_start"])
-        stale[row[(row >= 0) & (column >= 0)], column[(row >= 0) & (column >= 0)]] = True
-        stale[row[(row >= 0) & (column < 0)]] = True
+        for one, first in zip(row.tolist(), column.tolist(), strict=True):
+            if one >= 0:
+                stale[one] |= _standing_still(posted[one], cube.get(POSTED, "energy")[one], first)
     if len(bus) > MOST_POINTS:
         every = np.unique(np.linspace(0, len(bus) - 1, MOST_POINTS).astype(np.int64))
         bus, hour = bus[every], hour[every]
@@ -120,6 +122,20 @@ def factors_view(cube: PriceCube, findings: pd.DataFrame, nodes: Nodes, hours: H
         recomputed=recomputed[bus, hour],
         stale=stale[bus, hour],
     )
+
+
+def _standing_still(factor: FloatArray, energy: Matrix, first: int) -> BoolArray:
+    """Return the hours, from the first one on, in which a factor stays what it was, within rounding; all if none."""
+    if first < 0:
+        return np.ones(len(factor), dtype=bool)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        room = 4.0 * DEFAULT_TOLERANCES.posted_rounding / np.abs(energy.astype(float)) + 1e-4
+        same = np.abs(factor - factor[first]) <= room
+    same[:first] = False
+    moved = np.flatnonzero(~same[first:])
+    if moved.size:
+        same[first + int(moved[0]) :] = False
+    return np.asarray(same)
 
 
 def _factors(cube: PriceCube, price_set: str) -> FloatArray:

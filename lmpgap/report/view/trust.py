@@ -93,37 +93,56 @@ def _largest(values: pd.Series) -> float:
 
 
 def _left_out(solves: pd.DataFrame, codes: dict[str, IntArray], hours: Hours) -> Table:
-    rows = []
+    """Return the stretches of intervals whose prices should not be used, each with the reasons of its worst hour."""
     reasons = solves["reasons"] if "reasons" in solves.columns else pd.Series("", index=solves.index)
-    doubtful = ~solves["verdict"].astype(str).isin(USABLE)
-    for index in solves.index[doubtful]:
-        place = int(hours.position(solves.loc[[index], "interval_start"])[0])
-        if place < 0:
-            continue
-        reason = reasons[index]
-        rows.append(
-            (
-                place,
-                (
-                    hours.label[place],
-                    str(solves.at[index, "formulation"]),
-                    str(solves.at[index, "verdict"]),
-                    str(solves.at[index, "status"]),
-                    "" if pd.isna(reason) else str(reason),
-                ),
-            )
-        )
+    verdicts = solves["verdict"].astype(str).to_numpy()
+    gap = np.nan_to_num(pd.to_numeric(solves["cost_gap"], errors="coerce").abs().to_numpy(dtype=float))
+    ranked = np.append(gap, -1.0)  # position -1, no solve, comes last
+    place = hours.position(solves["interval_start"]) if len(solves) else np.zeros(0, dtype=np.int64)
+    formulations = solves["formulation"].astype(str).to_numpy()
+    rows: list[tuple[int, tuple[str, ...]]] = []
     for formulation, code in codes.items():
-        for missing in np.flatnonzero(code < 0).tolist():
-            rows.append((missing, (hours.label[missing], formulation, "not solved", "", "no solve in the run folder")))
-    rows.sort(key=lambda row: (row[0], row[1][1]))
+        word = np.full(hours.n, "not solved", dtype=object)
+        row_of = np.full(hours.n, -1)
+        own = np.flatnonzero((formulations == formulation) & (place >= 0))
+        word[place[own]], row_of[place[own]] = verdicts[own], own
+        word[code < 0] = "not solved"
+        doubtful = ~np.isin(word.astype(str), USABLE)
+        begins = doubtful & (np.r_[True, ~doubtful[:-1]] | np.r_[True, word[1:] != word[:-1]])
+        for first in np.flatnonzero(begins).tolist():
+            last = first
+            while last + 1 < hours.n and doubtful[last + 1] and not begins[last + 1]:
+                last += 1
+            members = row_of[first : last + 1]
+            worst = int(members[np.argmax(ranked[members])])
+            known = worst >= 0
+            rows.append(
+                (
+                    first,
+                    (
+                        hours.label[first] + (f" to {hours.label[last]}" if last > first else ""),
+                        f"{last - first + 1}",
+                        formulation,
+                        str(word[first]),
+                        str(solves["status"].iloc[worst]) if known else "",
+                        _leading(reasons.iloc[worst]) if known else "no solve in the run folder",
+                    ),
+                )
+            )
+    rows.sort(key=lambda row: (row[0], row[1][2]))
     return Table(
         caption="Hours whose prices should not be used, and why",
-        columns=("Hour", "Formulation", "Verdict", "Status", "Reason"),
-        numeric=(False, False, False, False, False),
+        columns=("Hours", "Count", "Formulation", "Verdict", "Status", "Reason (of the worst hour)"),
+        numeric=(False, True, False, False, False, False),
         rows=tuple(text for _, text in rows[:_LISTED]),
-        note=f"{min(len(rows), _LISTED)} of {len(rows)}." if rows else "",
+        note=f"{min(len(rows), _LISTED)} of {len(rows)} stretches." if rows else "",
     )
+
+
+def _leading(reasons: object, clauses: int = 3) -> str:
+    """Return the first clauses of the reasons; all of them are in the run folder."""
+    parts = [] if pd.isna(reasons) else [part.strip() for part in str(reasons).split(";") if part.strip()]  # type: ignore[call-overload]
+    return "; ".join(parts[:clauses]) + (f"; and {len(parts) - clauses} more" if len(parts) > clauses else "")
 
 
 def _uniqueness(prices: pd.DataFrame, cube: PriceCube) -> Table:
