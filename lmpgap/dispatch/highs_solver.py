@@ -77,13 +77,12 @@ def solve_linear(program: ConicProgram) -> ConicSolution:
             solver=name,
             seconds=0.0,
         )
-    highs = _model(program, presolve=True)
-    seconds = _run(highs)
+    highs, seconds = _run(program, presolve=True)
     outcome = highs.getModelStatus()
     if outcome in (_Model.kUnboundedOrInfeasible, _Model.kUnknown, _Model.kNotset):
         # Presolve stops as soon as it knows that there is no optimum; the simplex method tells which of the two.
-        highs = _model(program, presolve=False)
-        seconds += _run(highs)
+        highs, more = _run(program, presolve=False)
+        seconds += more
         outcome = highs.getModelStatus()
     status = status_of(outcome)
     message = str(highs.modelStatusToString(outcome))
@@ -110,10 +109,12 @@ def solve_linear(program: ConicProgram) -> ConicSolution:
     )
 
 
-def _run(highs: highspy.Highs) -> float:
+def _run(program: ConicProgram, *, presolve: bool) -> tuple[highspy.Highs, float]:
+    """Return the solver after its run, and its seconds, handing over the program included."""
     start = time.perf_counter()
+    highs = _model(program, presolve=presolve)
     highs.run()
-    return time.perf_counter() - start
+    return highs, time.perf_counter() - start
 
 
 def _model(program: ConicProgram, *, presolve: bool) -> highspy.Highs:

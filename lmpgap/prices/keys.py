@@ -109,7 +109,6 @@ def merge_by_key(rows: ConstraintRows) -> KeyedConstraints:
         np.divide(row_shadow_price, shadow_price[row_key], out=np.zeros(rows.n_row), where=binding),
         1.0 / n_rows_of_key[row_key],
     )
-    average = sparse.csr_array((share * rows.to_unit, (row_key, np.arange(rows.n_row))), shape=(n_key, rows.n_row))
 
     # The first row of each key in order of multiplier, then of slack, is the one whose limit is shown.
     order = np.lexsort((rows.limit - rows.value, -row_shadow_price, row_key))
@@ -125,5 +124,16 @@ def merge_by_key(rows: ConstraintRows) -> KeyedConstraints:
         value=rows.value[shown] * rows.to_unit[shown],
         shadow_price=shadow_price,
         at_penalty=at_penalty,
-        angle_gain=sparse.csr_array(average @ rows.angle_gain),
+        angle_gain=_averaged(rows, row_key, n_key, share * rows.to_unit),
     )
+
+
+def _averaged(rows: ConstraintRows, row_key: IntArray, n_key: int, weight: FloatArray) -> sparse.csr_array:
+    """Return the weighted sum of the gains of each key's rows, sparse (n_key, n_branch)."""
+    gain = rows.angle_gain
+    if n_key == rows.n_row:
+        # One row per key, as mostly: nothing to add up, and keys are in the order of the rows.
+        data = gain.data * np.repeat(weight, np.diff(gain.indptr))
+        return sparse.csr_array((data, gain.indices, gain.indptr), shape=gain.shape)
+    gather = sparse.csr_array((weight, (row_key, np.arange(rows.n_row))), shape=(n_key, rows.n_row))
+    return sparse.csr_array(gather @ gain)
