@@ -136,7 +136,8 @@ def test_hub_means_are_weighted_means_of_the_buses(run: SyntheticRun, view: Week
 def test_tracking_ranks_the_price_sets_by_their_error(view: WeeklyView) -> None:
     errors = [float(row[1]) for row in view.tracking.rows]
     assert errors == sorted(errors)
-    assert {row[0] for row in view.tracking.rows} == {"dc", "dc-loss", "soc", "posted"}
+    assert {row[0] for row in view.tracking.rows} == {"dc", "dc-loss", "soc", "soc, usable hours", "posted"}
+    assert {row[0]: row[-1] for row in view.tracking.rows}["soc, usable hours"] == "156"
 
 
 def test_constraint_matrix_holds_the_shadow_prices(run: SyntheticRun, view: WeeklyView) -> None:

@@ -42,8 +42,8 @@ from lmpgap.report.view.stakes import (
 from lmpgap.report.view.trust import USABLE, trust_view
 from lmpgap.settlement.result import Settlement
 
-_HASHES = ("inputs", "hashes", "sha256")
-"""Parts of a manifest that the section on inputs shows already."""
+_ELSEWHERE = ("scenario", "inputs", "hashes", "sha256")
+"""Parts of a manifest that other sections show already."""
 
 
 def build_view(
@@ -114,7 +114,7 @@ def build_view(
         pairs=tuple(views.values()),
         main=main,
         ladder=tuple(views[key] for key in ladder_keys(cube)),
-        tracking=tracking_table(cube, nodes.load_mw, currency),
+        tracking=tracking_table(cube, nodes.load_mw, trust, currency),
         inside=inside,
         drivers=tuple(blocks.values()),
         stakes=stakes_table(accounts, currency),
@@ -212,18 +212,21 @@ def _inputs(scenario: ReportScenario) -> Table:
 
 
 def _produced_by(manifest: Mapping[str, Any]) -> tuple[tuple[str, str], ...]:
-    """Return versions and settings of the run as flat text, in the manifest's order; input hashes stand apart."""
+    """Return versions and settings of the run as flat text, in the manifest's order.
+
+    The scenario's own settings and the input hashes stand in sections of their own; folders belong to one machine.
+    """
     lines: list[tuple[str, str]] = []
 
-    def walk(prefix: str, value: Any) -> None:
+    def walk(words: tuple[str, ...], value: Any) -> None:
         if isinstance(value, Mapping):
             for key, inner in value.items():
-                if key not in _HASHES:
-                    walk(f"{prefix}.{key}" if prefix else str(key), inner)
-        elif isinstance(value, (list, tuple)):
-            lines.append((prefix, ", ".join(str(item) for item in value)))
-        else:
-            lines.append((prefix, str(value)))
+                if key not in _ELSEWHERE:
+                    walk((*words, str(key)), inner)
+            return
+        text = ", ".join(str(item) for item in value) if isinstance(value, (list, tuple)) else str(value)
+        if text:
+            lines.append((" ".join(word.replace("_", " ") for word in words if word != "settings"), text))
 
-    walk("", manifest)
+    walk((), manifest)
     return tuple(lines)

@@ -10,11 +10,12 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from lmpgap.report.text import number, percent
-from lmpgap.report.view.cube import COMPONENTS, LADDER, POSTED, PriceCube
+from lmpgap.report.view.cube import COMPONENTS, LADDER, POSTED, Matrix, PriceCube
 from lmpgap.report.view.hours import Hours
-from lmpgap.report.view.model import DriverBlock, PairView, Table
+from lmpgap.report.view.model import DriverBlock, PairView, Table, TrustView
 from lmpgap.report.view.nodes import Nodes
-from lmpgap.scenario.network import FloatArray
+from lmpgap.report.view.trust import USABLE
+from lmpgap.scenario.network import BoolArray, FloatArray
 
 PairKey = tuple[str, str]
 _ROWS = 12
@@ -176,35 +177,20 @@ def when_table(pair: PairView, cube: PriceCube, nodes: Nodes, hours: Hours, curr
     )
 
 
-def tracking_table(cube: PriceCube, load_mw: FloatArray, currency: str) -> Table:
-    """Return how closely each other price set follows the AC prices; no rows without AC."""
-    rows = []
+def tracking_table(cube: PriceCube, load_mw: FloatArray, trust: TrustView, currency: str) -> Table:
+    """Return how closely each other price set follows the AC prices; no rows without AC.
+
+    A formulation with hours whose prices should not be used has a second row over its usable hours only.
+    """
+    rows: list[tuple[float, tuple[str, ...]]] = []
     if "ac" in cube.sets:
-        level = float(np.nanmean(np.abs(cube.get("ac")))) if np.isfinite(cube.get("ac")).any() else float("nan")
-        for name in cube.sets:
-            if name == "ac":
-                continue
+        for name in (name for name in cube.sets if name != "ac"):
             error = cube.difference("ac", name).astype(float)
-            finite = np.isfinite(error)
-            if not finite.any():
-                continue
-            size = np.abs(error)
-            weights = np.broadcast_to(load_mw[:, None], error.shape) * finite
-            weighted = float((np.nan_to_num(size) * weights).sum() / weights.sum()) if weights.sum() else float("nan")
-            rows.append(
-                (
-                    float(np.nanmean(size)),
-                    (
-                        name,
-                        number(float(np.nanmean(size))),
-                        percent(float(np.nanmean(size)) / level) if level else "",
-                        number(weighted),
-                        number(float(np.nanmean(error)), signed=True),
-                        number(float(np.nanpercentile(size, 95))),
-                        percent(float((size[finite] <= 1.0).mean())),
-                    ),
-                )
-            )
+            rows += _tracking_row(name, error, cube.get("ac"), load_mw)
+            usable = _usable_hours(trust, name)
+            if usable is not None and usable.any() and not usable.all():
+                part = np.where(usable[None, :], error, np.nan)
+                rows += _tracking_row(f"{name}, usable hours", part, cube.get("ac"), load_mw)
         rows.sort(key=lambda row: row[0])
     return Table(
         caption=f"Which price set follows the AC prices best this week, {currency}/MWh",
@@ -216,11 +202,42 @@ def tracking_table(cube: PriceCube, load_mw: FloatArray, currency: str) -> Table
             "Bias",
             "95 % within",
             "Within 1.00",
+            "Hours",
         ),
-        numeric=(False, True, True, True, True, True, True),
+        numeric=(False, True, True, True, True, True, True, True),
         rows=tuple(text for _, text in rows),
         note="Error is the size of the difference from the AC price at the same bus and hour; best first.",
     )
+
+
+def _usable_hours(trust: TrustView, formulation: str) -> BoolArray | None:
+    if formulation not in trust.code or not trust.words:
+        return None
+    usable = np.append([word in USABLE for word in trust.words], False)  # position -1: not solved
+    return np.asarray(usable[trust.code[formulation]], dtype=bool)
+
+
+def _tracking_row(name: str, error: FloatArray, ac: Matrix, load_mw: FloatArray) -> list[tuple[float, tuple[str, ...]]]:
+    """Return mean error and the texts of one row; nothing where no price can be compared."""
+    finite = np.isfinite(error)
+    if not finite.any():
+        return []
+    size = np.abs(error[finite])
+    mean = float(size.mean())
+    level = float(np.abs(ac[finite]).mean())
+    load = np.broadcast_to(load_mw[:, None], error.shape)[finite]
+    weighted = float(size @ load / load.sum()) if load.sum() else float("nan")
+    texts = (
+        name,
+        number(mean),
+        percent(mean / level) if level else "",
+        number(weighted),
+        number(float(error[finite].mean()), signed=True),
+        number(float(np.percentile(size, 95))),
+        percent(float((size <= 1.0).mean())),
+        f"{int(finite.any(axis=0).sum())}",
+    )
+    return [(mean, texts)]
 
 
 def _row_mean(values: FloatArray) -> FloatArray:

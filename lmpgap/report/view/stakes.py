@@ -226,10 +226,10 @@ def deadlines_table(settlement: Settlement | None, currency: str) -> Table:
             rows.append(
                 (
                     str(account),
-                    f"{first['deadline']}",
-                    "" if pd.isna(left) else f"{int(left)}",
+                    f"{pd.Timestamp(first['deadline']):%Y-%m-%d}",
+                    NO_VALUE if pd.isna(left) else f"{int(left)}",
                     number(float(ordered.loc[same, "amount"].sum()), 0, signed=True),
-                    f"{ordered.iloc[-1]['deadline']}",
+                    f"{pd.Timestamp(ordered.iloc[-1]['deadline']):%Y-%m-%d}",
                     number(float(ordered["amount"].sum()), 0, signed=True),
                 )
             )
