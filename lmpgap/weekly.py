@@ -29,6 +29,7 @@ from lmpgap.progress import Progress, silent
 from lmpgap.report.index import update_index
 from lmpgap.report.render import write_weekly_report
 from lmpgap.report.view import build_view
+from lmpgap.runs.areas import write_areas
 from lmpgap.runs.folder import RunFolder
 from lmpgap.runs.price import price
 from lmpgap.runs.schema import RUN_TABLES
@@ -108,6 +109,7 @@ def weekly_report(
         progress(TASK, 2, len(_STEPS))
         settlement = settle_run(scenario, folder, today)
         progress(TASK, 3, len(_STEPS))
+        write_areas(scenario, folder)
         folder.write("sweep", sweep(scenario, SWEEP_FACTORS, formulations=tuple(formulations_of(folder))))
         progress(TASK, 4, len(_STEPS))
     tables = {name: folder.table(name) for name in RUN_TABLES}

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import typer
 
+from lmpgap.cli.areas import areas
 from lmpgap.cli.check import check
 from lmpgap.cli.convert import convert
 from lmpgap.cli.price import compare, price
@@ -12,7 +13,7 @@ from lmpgap.cli.sweep import ageing, sweep
 from lmpgap.cli.verify import verify
 from lmpgap.cli.weekly import weekly
 
-COMMANDS = (check, price, compare, settle, weekly, sweep, ageing, verify, convert)
+COMMANDS = (check, price, compare, settle, weekly, areas, sweep, ageing, verify, convert)
 
 
 def register(app: typer.Typer) -> None:

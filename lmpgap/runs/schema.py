@@ -207,6 +207,44 @@ RUN_TABLES: dict[str, RunTable] = {
             ),
         ),
         RunTable(
+            "areas",
+            "Prices of hubs (fixed weights) and zones (weighted with served load).",
+            _columns(
+                [
+                    _INTERVAL,
+                    _FORMULATION,
+                    ("area", "text", "", "hub or zone"),
+                    ("kind", "text", "", "hub or zone"),
+                    ("lmp", "number", "$/MWh", "sum of the components; none where a bus with weight has no price"),
+                    ("energy_component", "number", "$/MWh", ""),
+                    ("congestion_component", "number", "$/MWh", ""),
+                    ("loss_component", "number", "$/MWh", ""),
+                    ("reactive_component", "number", "$/MWh", ""),
+                    ("load_mw", "number", "MW", "load served at its buses"),
+                    ("verdict", "text", "", "of the solve the prices come from"),
+                ]
+            ),
+        ),
+        RunTable(
+            "drift",
+            "A zone's load-weighted price from one day to the next: price change and weight drift add up to it.",
+            _columns(
+                [
+                    _FORMULATION,
+                    ("zone", "text", "", ""),
+                    ("before", "text", "", "local day, or run"),
+                    ("after", "text", "", "local day, or run"),
+                    ("component", "text", "", "lmp, energy, congestion, loss or reactive"),
+                    ("price_before", "number", "$/MWh", "weighted with the load of the hours both sides hold"),
+                    ("price_after", "number", "$/MWh", ""),
+                    ("price_change", "number", "$/MWh", "because prices moved, at the mean of both weights"),
+                    ("weight_drift", "number", "$/MWh", "because load moved between buses and hours"),
+                    ("coverage", "number", "-", "share of the load of both sides that is compared"),
+                    ("usable", "number", "-", "share of it whose prices may be used on both sides"),
+                ]
+            ),
+        ),
+        RunTable(
             "differences",
             "Price of `against` minus price of `base`.",
             _columns(
