@@ -17,7 +17,11 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, Network
 
 
 class SolveStatus(Enum):
-    """How a solve ended; only the first two may be priced, and only after the certificate."""
+    """How a solve ended, in the solver's own words.
+
+    The certificate decides whether it may be priced, not the status: an answer that a solver calls inaccurate is
+    certified when every measured residual is within its tolerance, and the reasons then say how the solver ended.
+    """
 
     OPTIMAL = "optimal"
     LOCALLY_OPTIMAL = "locally optimal"
