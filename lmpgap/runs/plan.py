@@ -24,6 +24,9 @@ _CHUNK_INTERVALS = 24
 _CHUNK_PRICES = 400_000
 """A chunk is at most a day, and less where that would be more than this many price rows."""
 
+_ROUNDS = 4
+"""With several workers, each gets at least so many chunks."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class RunSettings:
@@ -158,7 +161,10 @@ class Plan:
     def chunks(self, wanted: Mapping[int, tuple[str, ...]], workers: int) -> Iterator[list[PlannedInterval]]:
         """Yield the intervals that still have to be solved, in chunks of consecutive ones."""
         size = min(_CHUNK_INTERVALS, max(1, _CHUNK_PRICES // max(1, 4 * self.scenario.network.n_bus)))
-        size = max(1, min(size, -(-len(wanted) // (2 * workers)))) if workers > 1 else size
+        if workers > 1:
+            # The same number of chunks for every worker, and several of them, so that all finish about together.
+            rounds = max(_ROUNDS, -(-len(wanted) // (workers * size)))
+            size = max(1, -(-len(wanted) // (workers * rounds)))
         positions = sorted(wanted)
         for first in range(0, len(positions), size):
             yield [self.interval(p, wanted[p]) for p in positions[first : first + size]]
