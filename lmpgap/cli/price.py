@@ -50,6 +50,12 @@ def price(
         float,
         typer.Option("--factors-age", min=0.0, help="With --factors-from: how old the operating point is, in hours."),
     ] = 0.0,
+    voltages_from: Annotated[
+        Path | None,
+        typer.Option(
+            "--voltages-from", metavar="RUN", help="Losses of dc-loss at this run's voltages; at 1 pu without it."
+        ),
+    ] = None,
     json: JsonOption = False,
 ) -> None:
     """Solve every interval, split and certify every price, and store all of it in a run folder.
@@ -65,7 +71,7 @@ def price(
     import pandas as pd
 
     from lmpgap.runs.folder import RunFolder
-    from lmpgap.runs.given_losses import FactorTable, FrozenPoints, LossSource
+    from lmpgap.runs.given_losses import FactorTable, FrozenPoints, LossSource, VoltageProfiles
     from lmpgap.runs.price import price as price_scenario
     from lmpgap.runs.summary import summarise_run
     from lmpgap.scenario.read import read_scenario
@@ -74,6 +80,8 @@ def price(
     source: LossSource | None = FactorTable(read) if losses == "table" else None
     if factors_from is not None:
         source = FrozenPoints(read, RunFolder(factors_from), age=pd.Timedelta(hours=factors_age))
+    if voltages_from is not None:
+        source = VoltageProfiles(read, RunFolder(voltages_from), source)
     with terminal_progress() as progress:
         folder = price_scenario(
             read,

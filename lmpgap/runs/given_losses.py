@@ -1,7 +1,8 @@
 """Losses the market's way: `dc-loss` with factors that were computed beforehand instead of its own.
 
 Two sources. A table of delivery factors (`delivery_factors` of the scenario) says what the operator used. The operating
-points of another run say what factors it would have used, had it taken them from there, some hours old or not.
+points of another run say what factors it would have used, had it taken them from there, some hours old or not. Either,
+or the formulation's own losses, can be had at the voltages of another run instead of 1 pu.
 """
 
 from __future__ import annotations
@@ -22,7 +23,7 @@ from lmpgap.scenario.scenario import Scenario
 
 @dataclass(frozen=True, kw_only=True)
 class GivenLosses:
-    """What one interval's `dc-loss` takes as given: either a base dispatch, or delivery factors.
+    """What one interval's `dc-loss` takes as given: a base dispatch, delivery factors, or voltages.
 
     Attributes
     ----------
@@ -34,12 +35,15 @@ class GivenLosses:
         [-]
     same_interval
         The base is an operating point of this very interval.
+    voltage : (n_bus,) or None
+        Voltage magnitudes in the loss coefficients [pu]; ``None`` is 1 pu everywhere.
     """
 
     angle: FloatArray | None = None
     output: FloatArray | None = None
     delivery_factor: FloatArray | None = None
     same_interval: bool = False
+    voltage: FloatArray | None = None
 
     def base(self, network: Network) -> DispatchResult:
         """Return the base dispatch as a result that carries nothing but angles and outputs."""
@@ -57,6 +61,9 @@ class GivenLosses:
         return replace(nothing, p=self.output, point=replace(nothing.point, angle=self.angle))
 
 
+WITH_VOLTAGES = ("ac", "soc")
+"""Formulations whose operating points have voltages, the better one first."""
+
 LossKind = Literal["own", "table", "frozen"]
 
 
@@ -70,7 +77,7 @@ class LossSetting:
         ``"own"``: those of its own flows (convex); ``"table"``: the scenario's delivery factors; ``"frozen"``: the
         operating points of another run.
     source
-        Name of that run's scenario and formulation.
+        Name of that run's scenario and formulation, and of the run that voltages were taken from.
     age_hours
         How much older than the interval the operating point is [h].
     """
@@ -191,6 +198,60 @@ class FrozenPoints:
             output=self._outputs.loc[when].to_numpy(float) / self._base_mva,
             same_interval=self._age == pd.Timedelta(0),
         )
+
+
+class VoltageProfiles:
+    """Losses at the voltages of another run's operating points, whatever else they are made of.
+
+    Parameters
+    ----------
+    run
+        Run folder with a solution of each interval under ``soc`` or ``ac``.
+    losses
+        Where the losses come from besides; the formulation's own flows by default.
+    formulation
+        Whose voltages; ``ac`` where the run holds it.
+
+    Raises
+    ------
+    DataError
+        When the run holds no formulation with voltages, or another network.
+    """
+
+    def __init__(
+        self, scenario: Scenario, run: RunFolder, losses: LossSource | None = None, *, formulation: str | None = None
+    ) -> None:
+        solved = set(run.table("solves", columns=["formulation"])["formulation"])
+        held = [name for name in WITH_VOLTAGES if name in solved]
+        if not held or (formulation is not None and formulation not in held):
+            raise DataError(
+                f"{run.path} has no solves of {formulation or ' or '.join(WITH_VOLTAGES)} to take voltages from"
+            )
+        chosen = formulation or held[0]
+        setting = LossSetting() if losses is None else losses.setting
+        told = f"voltages of {run.manifest['scenario']['name']}, {chosen}"
+        self.setting = replace(setting, source=f"{setting.source}; {told}" if setting.source else told)
+        self._losses = losses
+        self._starts = scenario.interval_starts
+        points = run.table("operating_point", columns=["interval_start", "bus", "v_pu"], formulation=chosen)
+        if not set(scenario.network.buses) <= set(points["bus"]):
+            raise DataError(f"{run.path} was made on another network: some buses have no voltage there")
+        # A bus without a voltage is dead there: no branch at it carries anything.
+        self._voltages = _wide(points, "bus", "v_pu", scenario.network.buses).fillna(1.0)
+
+    def at(self, position: int) -> GivenLosses:
+        """Return what the interval at a position takes as given.
+
+        Raises
+        ------
+        DataError
+            When the run has no solution of the interval.
+        """
+        when = self._starts[position]
+        if when not in self._voltages.index:
+            raise DataError(f"there are no voltages of {when.isoformat()} ({self.setting.source})")
+        given = GivenLosses() if self._losses is None else self._losses.at(position)
+        return replace(given, voltage=self._voltages.loc[when].to_numpy(float))
 
 
 def _wide(frame: pd.DataFrame, key: str, value: str, names: tuple[str, ...]) -> pd.DataFrame:

@@ -142,12 +142,15 @@ def _solve(
 
 
 def _with_given_losses(space: Workspace, given: GivenLosses, weights: FloatArray) -> Formulation:
-    """Return `dc-loss` with losses frozen at a base dispatch, or with a table of delivery factors."""
-    network, on, options = space.network, space.branch_in_service, space.options
+    """Return `dc-loss` with losses frozen at a base dispatch, with given delivery factors, or at given voltages."""
+    network, on = space.network, space.branch_in_service
+    options = replace(space.options, voltage_profile=given.voltage)
     if given.delivery_factor is not None:
         return DeliveryFactorDispatch(
             network, on, options, delivery_factor=given.delivery_factor, loss_distribution=weights
         )
+    if given.angle is None:
+        return build_formulation("dc-loss", network, on, options)
     proximal = options.tolerances.proximal_at_base if given.same_interval else options.tolerances.proximal_away
     return FrozenLossDispatch(network, on, options, given.base(network), proximal=proximal)
 

@@ -9,7 +9,7 @@ import pytest
 from lmpgap.errors import DataError, RunFolderError
 from lmpgap.runs.factor_age import factor_age
 from lmpgap.runs.folder import RunFolder
-from lmpgap.runs.given_losses import FactorTable, FrozenPoints
+from lmpgap.runs.given_losses import FactorTable, FrozenPoints, VoltageProfiles
 from lmpgap.runs.price import price
 from lmpgap.scenario.read import read_scenario
 from tests.support.scenarios import hourly_scenario
@@ -92,3 +92,39 @@ def test_gaps_in_the_table_are_all_named(week: tuple[Path, RunFolder], tmp_path:
     with pytest.raises(DataError) as caught:
         FactorTable(read_scenario(folder))
     assert [fault.column for fault in caught.value.faults] == ["B4", "B5"]
+
+
+def test_losses_at_the_voltages_of_the_ac_dispatch(tmp_path: Path) -> None:
+    """High voltages carry the same power with less current: losses fall by about the square, towards those of AC."""
+    folder = hourly_scenario(tmp_path / "scenario", "case14", hours=3)
+    scenario = read_scenario(folder)
+    run = price(scenario, tmp_path / "run", formulations=("dc-loss", "ac"), audit=False)
+    profiled = price(
+        scenario, tmp_path / "profiled", formulations=("dc-loss",), losses=VoltageProfiles(scenario, run), audit=False
+    )
+    flat, exact = (run.table("solves", formulation=name)["losses_mw"].to_numpy() for name in ("dc-loss", "ac"))
+    losses = profiled.table("solves")["losses_mw"].to_numpy()
+    voltage = run.table("operating_point", formulation="ac")["v_pu"]
+    assert voltage.mean() > 1.02
+    assert losses / flat == pytest.approx(np.full(3, 1 / voltage.mean() ** 2), rel=0.02)
+    assert (np.abs(losses - exact) < 0.5 * np.abs(flat - exact)).all()
+    assert set(profiled.table("solves")["verdict"]) == {"certified"}
+    assert profiled.manifest["settings"]["losses"]["source"] == "voltages of case14_ieee, ac"
+    combined = VoltageProfiles(scenario, run, FrozenPoints(scenario, run, formulation="dc-loss"))
+    assert combined.setting.kind == "frozen"
+    frozen = price(scenario, tmp_path / "frozen", formulations=("dc-loss",), losses=combined, audit=False)
+    assert frozen.table("solves")["losses_mw"].to_numpy() == pytest.approx(losses, rel=0.01)
+
+
+def test_voltages_that_do_not_exist_are_told(week: tuple[Path, RunFolder], tmp_path: Path) -> None:
+    folder, run = week
+    scenario = read_scenario(folder)
+    linear = price(scenario, tmp_path / "linear", formulations=("dc",), positions=[0])
+    with pytest.raises(DataError, match="no solves of ac or soc to take voltages from"):
+        VoltageProfiles(scenario, linear)
+    other = read_scenario(hourly_scenario(tmp_path / "other", "case14", hours=2))
+    with pytest.raises(DataError, match="another network"):
+        VoltageProfiles(other, run)
+    longer = read_scenario(hourly_scenario(tmp_path / "longer", "case5", hours=9))
+    with pytest.raises(DataError, match="no voltages of 2026-03-07T15:00"):
+        VoltageProfiles(longer, run).at(8)
