@@ -199,8 +199,11 @@ def _by_constraints(
     price = np.where(live, split.lmp, 0.0)
     kind = np.array(rows.kind, dtype=object)
     turns = np.diff(rows.angle_gain.indptr) > 0
+    # A lower limit is stored as the number it is; as a limit from above it stands on minus the quantity.
+    sign = np.where(np.array(rows.direction, dtype=object) == "lower", -1.0, 1.0)
     # $/h: multiplier per internal unit times internal unit
-    worth, over = rows.multiplier * rows.limit, rows.multiplier * np.maximum(rows.value - rows.limit, 0.0)
+    worth = rows.multiplier * sign * rows.limit
+    over = rows.multiplier * np.maximum(sign * (rows.value - rows.limit), 0.0)
     over = np.where(rows.at_penalty, over, 0.0)
     w = np.where(live, point.w, 0.0)
     shunt = np.where(live, network.shunt_g, 0.0) * w

@@ -77,6 +77,24 @@ def test_shifters_taps_and_shunts(name):
         assert money.by_constraints.shunts < -10.0
 
 
+@pytest.mark.parametrize("name", ["dc", "dc-loss"])
+@pytest.mark.parametrize("reversed_branch", [False, True])
+def test_a_lower_angle_limit_is_worth_as_much_as_the_upper_one_of_the_branch_turned_round(name, reversed_branch):
+    """$10 in the west, $30 in the east, one line of x = 0.1 held to 2 deg: rent (30 - 10) x 34.907 MW."""
+    limit = np.deg2rad(2.0)
+    ends = (1, 0) if reversed_branch else (0, 1)
+    network = small_network(2, [(*ends, 0.1, np.inf)], resource_bus=[0, 1]).with_changes(
+        angle_min=np.array([-limit]), angle_max=np.array([limit])
+    )
+    inputs = simple_inputs(network, [0, 100], [(0, 400, 10), (1, 400, 30)])
+    result = solve(name, network, inputs)
+    (binding,) = np.flatnonzero(result.constraints.multiplier > 1e-3)
+    assert result.constraints.direction[binding] == ("lower" if reversed_branch else "upper")
+    money = balance_of(network, inputs, result)
+    assert money.by_constraints.congestion_rent == pytest.approx(20.0 * 100.0 * limit / 0.1, rel=1e-6)
+    assert money.relative_remainder < 1e-6
+
+
 @pytest.mark.parametrize("name", FORMULATIONS)
 def test_weighted_flow_limits(name):
     """A limit on a weighted sum of flows, as interfaces and contingencies are."""
