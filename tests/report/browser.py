@@ -93,8 +93,16 @@ def draw_all(page: Any) -> None:
     page.evaluate("document.documentElement.style.scrollBehavior = 'auto'; window.scrollTo(0, 0)")
 
 
+def between(page: Any, first: str, last: str) -> dict[str, float]:
+    """Return the part of the page from one element to another, with a little room above and below."""
+    page.evaluate("window.scrollTo(0, 0)")
+    top = page.locator(first).bounding_box()["y"] - 12
+    end = page.locator(last).bounding_box()
+    return {"x": 0, "y": top, "width": page.viewport_size["width"], "height": end["y"] + end["height"] + 12 - top}
+
+
 def take_pictures(browser: Any, path: Path, folder: Path, schemes: tuple[str, ...] = ("light", "dark")) -> list[Path]:
-    """Write full-page screenshots at phone and desktop size in each scheme, the opening view, and an A4 PDF."""
+    """Write full-page screenshots at phone and desktop size per scheme, the opening view, the map, and an A4 PDF."""
     folder.mkdir(parents=True, exist_ok=True)
     written = []
     for scheme in schemes:
@@ -107,6 +115,11 @@ def take_pictures(browser: Any, path: Path, folder: Path, schemes: tuple[str, ..
                 if name == "desktop" and scheme == "light":
                     target = folder / "opening.png"
                     page.screenshot(path=target)
+                    written.append(target)
+                    target = folder / "where.png"
+                    page.screenshot(
+                        path=target, full_page=True, clip=between(page, "#console", "#picture-map .reading")
+                    )
                     written.append(target)
                     target = folder / "print.pdf"
                     page.pdf(path=target, prefer_css_page_size=True, print_background=True)

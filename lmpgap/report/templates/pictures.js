@@ -336,6 +336,7 @@ class Plot {
     const subject = fill[this.slot](this.spec, this);
     document.querySelector(`[data-subject="${this.slot}"]`).textContent = subject;
     const layout = themed({ ...this.spec.layout, width: this.width() });
+    shortDays(layout);
     if (!printing && window.innerWidth < 640) narrow(layout, this.slot);
     Plotly.react(this.element, themed(this.spec.data), layout, CONFIG);
     if (!this.drawn) {
@@ -359,6 +360,14 @@ class Plot {
     this.stale = true;
     if (this.near) this.draw();
   }
+}
+
+// Day names lose their month where they would run into each other.
+function shortDays(layout) {
+  const names = layout.xaxis?.ticktext;
+  if (!names || !/^\w{3} \d+ \w{3}$/.test(names[0])) return;
+  const room = (layout.width - layout.margin.l - layout.margin.r - 90) / names.length;
+  if (room < 78) layout.xaxis = { ...layout.xaxis, ticktext: names.map((text) => text.replace(/ \w{3}$/, "")) };
 }
 
 // On a phone: less margin, legends above in two lines, smaller map.
