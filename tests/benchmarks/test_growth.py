@@ -82,7 +82,7 @@ def test_secure_dispatch_of_one_hour(record, benchmark, name, n_outage):
     outages = OutageFactors(network, inputs.branch_in_service, options.dc)
     dispatch = build_formulation("dc", network, inputs.branch_in_service, options)
     alone = dispatch.solve(inputs, FlowLimits.none(network.n_branch))
-    result, limits = benchmark.pedantic(
+    result, _ = benchmark.pedantic(
         solve_secure,
         args=(dispatch, inputs, FlowLimits.none(network.n_branch), outages, options.tolerances),
         rounds=1,
