@@ -37,7 +37,7 @@ from lmpgap.runs.sweep import sweep
 from lmpgap.scenario.read import read_scenario
 from lmpgap.scenario.scenario import Scenario
 from lmpgap.settlement.result import Settlement
-from lmpgap.settlement.settle import settle
+from lmpgap.settlement.settle import has_posted, settle
 
 TASK = "weekly report"
 _STEPS = ("checking posted prices", "comparing", "settling", "sweeping load", "writing")
@@ -126,7 +126,7 @@ def weekly_report(
             wording=wording(scenario),
         )
     )
-    view = build_view(tables, scenario, folder.manifest, sentences)
+    view = build_view(tables, scenario, folder.manifest, sentences, posted=check.prices, settlement=settlement)
     report = write_weekly_report(view, out)
     index = update_index(report.parent, view, report)
     progress(TASK, len(_STEPS), len(_STEPS))
@@ -227,7 +227,7 @@ def settle_run(scenario: Scenario, folder: RunFolder, today: date | None = None)
     """Settle the posted prices against the best formulation with losses; ``None`` where there is nothing to settle."""
     formulations = formulations_of(folder)
     against = next((name for name in ("ac", "dc-loss", "soc") if name in formulations), None)
-    nothing = scenario.tables["posted"].empty or scenario.tables["positions"].empty or against is None
+    nothing = not has_posted(scenario) or scenario.tables["positions"].empty or against is None
     if nothing or against is None:
         folder.write("settlement", RUN_TABLES["settlement"].empty())
         return None
