@@ -35,9 +35,9 @@ from lmpgap.dispatch.ac_result import (
     stationarity_system,
 )
 from lmpgap.dispatch.ac_rows import ac_constraints
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import bus_list, live_buses
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult, SolveStatus, no_solution
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network

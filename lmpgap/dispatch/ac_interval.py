@@ -7,8 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from lmpgap.dispatch.ac_model import AcProgram
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.scenario.network import FloatArray, IntervalInputs, OfferSegments
 

@@ -7,8 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.live import LiveNetwork, live_network
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.supply import rated_branches
 from lmpgap.scenario.network import BoolArray, IntArray, Network
 

@@ -27,7 +27,7 @@ from lmpgap.dispatch.ac_derivatives import derivative_functions
 from lmpgap.dispatch.ac_flows import SymbolicFlows, entries, times
 from lmpgap.dispatch.ac_layout import AcShape, make_layout
 from lmpgap.dispatch.branch_model import BranchModel
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.supply import placed
 from lmpgap.scenario.network import FloatArray, IntArray, Network, incidence
 

@@ -15,7 +15,7 @@ from scipy import sparse
 from lmpgap.dispatch.ac_interval import AcVectors, segment_slope
 from lmpgap.dispatch.ac_model import AcProgram
 from lmpgap.dispatch.branch_model import BranchModel, operating_point, voltage_products
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import (
     BalanceMultipliers,
     OperatingPoint,

@@ -7,8 +7,8 @@ import numpy as np
 from lmpgap.dispatch.ac_interval import AcVectors
 from lmpgap.dispatch.ac_model import AcProgram
 from lmpgap.dispatch.ac_result import AcSolution
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
 from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
 from lmpgap.scenario.network import FloatArray, IntervalInputs

@@ -117,21 +117,6 @@ def without_solution(
     )
 
 
-def solve_program(program: ConicProgram, tolerances: Tolerances) -> tuple[ConicSolution, tuple[str, ...]]:
-    """Solve with the solver that suits the program, and say what had to be done.
-
-    A linear program goes to HiGHS, whose answer is a vertex: prices at a degenerate optimum are then those of
-    one basis and the same on every machine. Everything else goes to Clarabel.
-    """
-    if program.is_linear:
-        from lmpgap.dispatch.highs_solver import solve_linear
-
-        return solve_linear(program), ()
-    from lmpgap.dispatch.clarabel_solver import solve_conic
-
-    return solve_conic(program, tolerances)
-
-
 def cone_reduce(ufunc: np.ufunc, values: FloatArray, cone_sizes: IntArray) -> FloatArray:
     """Return one figure per cone from one per row, e.g. a sum."""
     if cone_sizes.size == 0:

@@ -10,11 +10,12 @@ from typing import Any
 import numpy as np
 from scipy import sparse
 
-from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, solve_program, stationarity_system
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, stationarity_system
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork, bus_list, live_buses, live_network
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder, ProgramTemplate
+from lmpgap.dispatch.program_solver import solve_program
 from lmpgap.dispatch.result import (
     BalanceMultipliers,
     ConstraintRows,

@@ -17,10 +17,10 @@ from scipy import sparse
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading, convex_model
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.linear_model import linear_branches
 from lmpgap.dispatch.live import LiveNetwork
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, ConstraintRows, OperatingPoint
 from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined

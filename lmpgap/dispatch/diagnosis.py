@@ -15,11 +15,13 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
-from lmpgap.dispatch.conic import ConicProgram, solve_program
+from lmpgap.dispatch.conic import ConicProgram
 from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import bus_list
+from lmpgap.dispatch.options import DispatchOptions
+from lmpgap.dispatch.program_solver import solve_program
 from lmpgap.dispatch.result import constraint_name
 from lmpgap.dispatch.soc_rows import angle_limits
 from lmpgap.dispatch.supply import rated_branches

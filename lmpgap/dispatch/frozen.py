@@ -29,9 +29,9 @@ from scipy import sparse
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexModel, Reading
 from lmpgap.dispatch.dc import DcDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import DispatchResult, FrozenFactors
 from lmpgap.dispatch.supply import SupplyResult

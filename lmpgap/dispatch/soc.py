@@ -27,9 +27,9 @@ from lmpgap.dispatch.angles import AngleFit
 from lmpgap.dispatch.branch_model import BranchModel, operating_point
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexDispatch, ConvexModel, Reading, convex_model
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import BalanceMultipliers, OperatingPoint
 from lmpgap.dispatch.soc_rows import angle_limits, soc_constraints

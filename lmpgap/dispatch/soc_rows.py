@@ -6,9 +6,9 @@ import numpy as np
 
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexModel
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
 from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined
 from lmpgap.dispatch.supply import rated_branches

@@ -12,9 +12,10 @@ from threadpoolctl import threadpool_limits
 
 from lmpgap.dispatch.ac_check import ac_check
 from lmpgap.dispatch.diagnosis import diagnose
-from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
+from lmpgap.dispatch.formulation import Formulation, build_formulation
 from lmpgap.dispatch.frozen import DeliveryFactorDispatch, FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits, interface_limits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import DispatchResult, SolveStatus
 from lmpgap.dispatch.security import solve_secure

@@ -10,8 +10,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
+from lmpgap.dispatch.formulation import Formulation, build_formulation
 from lmpgap.dispatch.limits import interface_limits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.security import solve_secure
 from lmpgap.prices.components import split_prices

@@ -9,8 +9,8 @@ from scipy import sparse
 from scipy.optimize import brentq
 
 from lmpgap.dispatch.ac import AcDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import ConstraintRows, DispatchResult, SolveStatus
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import BidSegments, IntervalInputs, Network, OfferSegments

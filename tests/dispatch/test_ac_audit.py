@@ -12,8 +12,8 @@ from lmpgap.dispatch.ac_audit import AcAudit, audit_dispatch
 from lmpgap.dispatch.ac_repair import MOVEMENT_FACTOR, Repair, repair_dispatch
 from lmpgap.dispatch.dc import DcDispatch
 from lmpgap.dispatch.dc_loss import DcLossDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult, SolveStatus
 from lmpgap.errors import SolveError
 from lmpgap.scenario.network import BidSegments, IntervalInputs, Network

@@ -7,8 +7,8 @@ import pytest
 
 from lmpgap.dispatch.ac import AcDispatch
 from lmpgap.dispatch.ac_check import ac_check
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.soc import SocDispatch
 from lmpgap.scenario.settings import Penalties
 from tests.dispatch.small_networks import two_bus

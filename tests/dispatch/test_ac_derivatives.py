@@ -11,7 +11,7 @@ from scipy import sparse
 
 from lmpgap.dispatch.ac_layout import AcShape
 from lmpgap.dispatch.ac_model import AcProgram
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.scenario.network import IntervalInputs, Network
 from lmpgap.scenario.settings import Penalties
 from tests.support.networks import load_network

@@ -7,8 +7,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from lmpgap.dispatch.ac import AcDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.scenario.network import IntervalInputs, Network
 from tests.support.networks import load_network

@@ -10,8 +10,8 @@ import numpy as np
 import pytest
 
 from lmpgap.dispatch.ac import AcDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.dispatch.soc import SocDispatch
 from lmpgap.prices.components import split_prices

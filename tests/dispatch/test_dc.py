@@ -7,8 +7,9 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.errors import DataError, LmpgapError
 from lmpgap.scenario.network import BidSegments

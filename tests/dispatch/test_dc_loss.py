@@ -7,7 +7,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.prices.certificate import certify
 from lmpgap.prices.components import split_prices

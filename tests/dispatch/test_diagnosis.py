@@ -9,8 +9,8 @@ import pytest
 from scipy import sparse
 
 from lmpgap.dispatch.diagnosis import diagnose
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.scenario.network import IntervalInputs, Network
 from lmpgap.scenario.settings import Penalties

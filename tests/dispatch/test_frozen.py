@@ -7,9 +7,9 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.frozen import DeliveryFactorDispatch, FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult, SolveStatus
 from lmpgap.errors import LmpgapError
 from lmpgap.prices.components import split_prices

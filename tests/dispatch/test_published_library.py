@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.prices.components import split_prices
 from lmpgap.scenario.settings import DcConvention

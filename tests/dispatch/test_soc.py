@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from lmpgap.dispatch.branch_model import BranchModel, operating_point
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.scenario.settings import Penalties
 from tests.dispatch.grids import finite_difference_price, grid, prices, solve

@@ -8,8 +8,8 @@ import numpy as np
 import pytest
 from scipy import sparse
 
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.scenario.settings import Penalties
 from tests.dispatch.grids import five_bus_growth, grid, prices, solve

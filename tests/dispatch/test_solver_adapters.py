@@ -11,7 +11,8 @@ import pytest
 from scipy import sparse
 
 from lmpgap.dispatch import clarabel_solver, highs_solver
-from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, solve_program, stationarity_system
+from lmpgap.dispatch.conic import ConicProgram, ConicSolution, residuals, stationarity_system
+from lmpgap.dispatch.program_solver import solve_program
 from lmpgap.dispatch.result import SolveStatus
 from lmpgap.errors import LmpgapError
 from lmpgap.tolerances import DEFAULT_TOLERANCES

@@ -5,8 +5,9 @@ from __future__ import annotations
 from functools import cache
 
 from lmpgap.dispatch.ac_check import AcCheck, ac_check
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.prices.certificate import Certificate, certify
 from lmpgap.prices.components import PriceSplit, split_prices

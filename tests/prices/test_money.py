@@ -8,9 +8,10 @@ import numpy as np
 import pytest
 from scipy import sparse
 
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.frozen import DeliveryFactorDispatch, FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.prices.components import split_prices
 from lmpgap.prices.money import MoneyBalance, money_balance
 from lmpgap.scenario.settings import Penalties

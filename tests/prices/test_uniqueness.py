@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 from scipy import sparse
 
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult, StationaritySystem
 from lmpgap.prices.components import constraints_of, split_prices
 from lmpgap.prices.null_space import left_null_space

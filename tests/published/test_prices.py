@@ -13,9 +13,10 @@ from functools import lru_cache
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions, Formulation, build_formulation
+from lmpgap.dispatch.formulation import Formulation, build_formulation
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.names import FORMULATIONS
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.prices.components import PriceSplit, split_prices
 from lmpgap.scenario.network import IntervalInputs, Network
