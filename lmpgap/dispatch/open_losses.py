@@ -21,10 +21,10 @@ import numpy as np
 from lmpgap.dispatch.conic import ConicProgram, ConicSolution
 from lmpgap.dispatch.convex import ConvexModel, Reading
 from lmpgap.dispatch.dc import DcDispatch
-from lmpgap.dispatch.formulation import DispatchOptions
 from lmpgap.dispatch.frozen import FrozenLossDispatch
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.program_builder import Affine, ProgramBuilder
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Network, incidence
@@ -32,8 +32,9 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Netwo
 PASSES = 40
 """Passes of moving tangents before the best one is taken; measured: 2 to 3 suffice."""
 
-_MOST_RETURNS = 3
-"""How often a branch may go back from its tangent into its cone."""
+_NEARLY = 0.005
+"""Once further losses have opened, those that cost less than this share of the median price are put on tangents
+before they open [-]; four times as much each time."""
 
 SETTLED = 1e-3
 """Share of the tolerated fictitious loss at which tangents count as touching: the loss is off by k (flow - flow0)^2,
@@ -137,17 +138,20 @@ def resolve_open_slack(
         result is a local optimum of it.
     """
     network, options = formulation.network, formulation.options
-    base_mva, factor = network.base_mva, formulation.linear.loss_factor
+    base_mva = network.base_mva
     tolerated = options.tolerances.fictitious_loss_mw / base_mva
     opens_from = SETTLED * tolerated
     burnt = relaxed.fictitious_loss * base_mva
     flow = _mid_flow(relaxed)
-    on_tangent = (relaxed.point.loss - factor * flow**2 > opens_from) | _losing_pays(
-        formulation, relaxed, inputs, flow_limits
-    )
+    frozen = FrozenLossDispatch(
+        network, formulation.branch_in_service, options, relaxed, proximal=options.tolerances.proximal_at_base
+    ).solve(inputs, flow_limits)
+    # Closing only what is open moves the burning to the next branch, pass after pass. With all losses on tangents near
+    # the relaxed dispatch nothing can be burnt, and the prices show where losing would pay.
+    on_tangent = _opened(formulation, relaxed, opens_from) | _nearly_pays(formulation, frozen, 0.0)
     best: DispatchResult | None = None
-    returned = np.zeros(network.n_branch, dtype=np.int64)
-    seconds, passes, settled = 0.0, 0, False
+    nearly, apart = 0.0, np.inf
+    seconds, passes, settled = frozen.solver_seconds, 0, False
     while not settled and passes < PASSES:
         passes += 1
         dispatch = TangentLossDispatch(
@@ -162,12 +166,17 @@ def resolve_open_slack(
         flow = _mid_flow(result)
         # A cone whose loss is all but free keeps some of the solver's slack, which more passes do not take away.
         opened = ~on_tangent & (dispatch.excess > opens_from) & (result.fictitious_loss > tolerated)
-        apart = float(np.sum(np.abs(dispatch.excess[on_tangent])))
-        # Where losing pays no longer the cone is right; but not for ever in and out.
-        back = on_tangent & (dispatch.loss_value > 0.0) & (returned < _MOST_RETURNS)
+        before, apart = apart, float(np.sum(np.abs(dispatch.excess[on_tangent])))
         settled = apart <= SETTLED * tolerated and not opened.any()
-        returned += back
-        on_tangent = (on_tangent & ~back) | opened
+        if opened.any():
+            nearly = max(4.0 * nearly, _NEARLY)
+            opened |= _nearly_pays(formulation, result, nearly)
+        elif apart > 0.5 * before:
+            # Too many tangents where losing costs: nothing holds their flows.
+            nearly *= 0.25
+        # Where losing costs clearly the cone is right; the distance between the two thresholds keeps branches from
+        # going in and out for ever.
+        on_tangent = (on_tangent & _nearly_pays(formulation, result, 3.0 * nearly)) | opened
     if best is None:
         message = f"feasible only by burning {burnt:.4g} MW that no flow causes; without it: {result.message}"
         return replace(result, message=message, loss_slack_open=True, solver_seconds=seconds)
@@ -180,23 +189,25 @@ def resolve_open_slack(
     return replace(best, loss_slack_open=True, solver_seconds=seconds, notes=(*best.notes, note))
 
 
-def _losing_pays(
-    formulation: DcDispatch, relaxed: DispatchResult, inputs: IntervalInputs, flow_limits: FlowLimits
-) -> BoolArray:
-    """Return True at branches between prices that are negative on average once nothing can be burnt.
+def _opened(formulation: DcDispatch, result: DispatchResult, opens_from: float) -> BoolArray:
+    """Return True where a loss is beyond that of its flow, shape (n_branch,)."""
+    physical = formulation.linear.loss_factor * _mid_flow(result) ** 2
+    return np.asarray(result.point.loss - physical > opens_from, dtype=bool)
 
-    A guess at the branches that need a tangent: closing only those that are open moves the burning to the next one,
-    pass after pass. It comes from all losses on tangents, held near the relaxed dispatch.
-    """
-    network, options = formulation.network, formulation.options
-    frozen = FrozenLossDispatch(
-        network, formulation.branch_in_service, options, relaxed, proximal=options.tolerances.proximal_at_base
-    ).solve(inputs, flow_limits)
-    if not frozen.status.has_solution:
+
+def _nearly_pays(formulation: DcDispatch, result: DispatchResult, nearly: float) -> BoolArray:
+    """Return True where losing pays, or costs less than a share of the usual price, shape (n_branch,)."""
+    network = formulation.network
+    if not result.status.has_solution:
         return np.zeros(network.n_branch, dtype=bool)
-    price = np.nan_to_num(frozen.multipliers.active)
-    between = price[network.from_bus] + price[network.to_bus]
-    return np.asarray(formulation.branch_in_service & (between < 0.0), dtype=bool)
+    price = result.multipliers.active
+    usual = float(np.nanmedian(np.abs(price)))
+    between = 0.5 * (price[network.from_bus] + price[network.to_bus])
+    # A rating counts the loss at its own end, so that losing costs the shadow price as well.
+    thermal = np.array([kind == "thermal" for kind in result.constraints.kind], dtype=bool)
+    rows = result.constraints.take(np.flatnonzero(thermal))
+    rated = np.asarray(abs(rows.angle_gain).sign().T @ (0.5 * rows.multiplier))
+    return np.asarray(formulation.branch_in_service & (np.nan_to_num(between) + rated < nearly * usual), dtype=bool)
 
 
 def _mid_flow(result: DispatchResult) -> FloatArray:
