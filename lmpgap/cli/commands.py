@@ -9,11 +9,11 @@ from lmpgap.cli.check import check
 from lmpgap.cli.convert import convert
 from lmpgap.cli.price import compare, price
 from lmpgap.cli.settle import settle
-from lmpgap.cli.sweep import ageing, sweep
+from lmpgap.cli.sweep import ageing, restate, sweep
 from lmpgap.cli.verify import verify
 from lmpgap.cli.weekly import weekly
 
-COMMANDS = (check, price, compare, settle, weekly, areas, sweep, ageing, verify, convert)
+COMMANDS = (check, price, compare, settle, weekly, areas, sweep, ageing, restate, verify, convert)
 
 
 def register(app: typer.Typer) -> None:

@@ -1,4 +1,4 @@
-"""`sweep` and `ageing`: how divergences grow with loading, and with the age of loss factors."""
+"""`sweep`, `ageing` and `restate`: growth with loading, age of loss factors, and a second opinion."""
 
 from __future__ import annotations
 
@@ -101,6 +101,41 @@ def ageing(
         echo_json(records(table))
         return
     echo_table(table)
+
+
+def restate(
+    scenario: ScenarioArgument,
+    intervals: Annotated[
+        str, typer.Option("--intervals", help="`peak`, `all`, or positions such as 0,12,18.")
+    ] = "peak",
+    formulations: Annotated[
+        str, typer.Option("--formulations", help="Comma-separated: dc, dc-loss, soc.")
+    ] = "dc,dc-loss,soc",
+    json: JsonOption = False,
+) -> None:
+    """Solve some intervals again from an independent statement of the problem, and compare cost and prices.
+
+    Exit status 1 when a restated solve disagrees.
+
+    Example: lmpgap restate scenarios/demo --intervals 0,12,18
+    """
+    chosen = parse_formulations(formulations)
+    from lmpgap.runs.second_opinion import second_opinion
+    from lmpgap.runs.sweep import peak_position
+    from lmpgap.scenario.read import read_scenario
+
+    loaded = read_scenario(scenario)
+    positions = _positions(intervals, loaded.n_interval)
+    with terminal_progress() as progress:
+        table = second_opinion(
+            loaded, [peak_position(loaded)] if positions is None else positions, formulations=chosen, progress=progress
+        )
+    if json:
+        echo_json(records(table))
+    else:
+        echo_table(table, decimals=6)
+    if not (table["agrees"] | (table["remark"] != "")).all():
+        raise typer.Exit(1)
 
 
 def _positions(text: str, n_interval: int) -> list[int] | None:

@@ -91,9 +91,9 @@ def solve_interval(
     results: dict[str, tuple[DispatchResult, FlowLimits]] = {}
     for name in planned.keys:
         if name == "ac" and "soc" not in results:
-            results["soc"] = _solve(space, "soc", planned, None)
+            results["soc"] = solve_planned(space, "soc", planned, None)
         start = results["soc"][0] if name == "ac" else None
-        results[name] = _solve(space, name, planned, start)
+        results[name] = solve_planned(space, name, planned, start)
     ac = results["ac"][0] if "ac" in results else None
     solved = [
         _priced(space, planned, name, *results[name], ac=ac, settings=settings, hours=hours) for name in planned.keys
@@ -116,7 +116,7 @@ def _audited(
     optimum, limits = results["ac"]
     rows: list[tuple[str, AuditRow]] = []
     for name in AUDITED:
-        linear = (results[name] if name in results else _solve(space, name, planned, None))[0]
+        linear = (results[name] if name in results else solve_planned(space, name, planned, None))[0]
         if not (linear.status.has_solution and optimum.status.has_solution):
             continue
         repairer = space.formulation("ac") if name in settings.repaired else None
@@ -125,9 +125,10 @@ def _audited(
     return tuple(rows)
 
 
-def _solve(
-    space: Workspace, name: str, planned: PlannedInterval, start: DispatchResult | None
+def solve_planned(
+    space: Workspace, name: str, planned: PlannedInterval, start: DispatchResult | None = None
 ) -> tuple[DispatchResult, FlowLimits]:
+    """Solve one interval under one formulation, contingencies included; return the limits it was solved with."""
     inputs = planned.inputs
     limits = interface_limits(space.network, inputs)
     given = planned.given if name == "dc-loss" else None

@@ -49,13 +49,13 @@ def assert_same(one: RunFolder, other: RunFolder) -> None:
 def count_solves(monkeypatch: pytest.MonkeyPatch) -> list[str]:
     """Names of the formulations that are really solved."""
     solved: list[str] = []
-    real = interval_module._solve
+    real = interval_module.solve_planned
 
     def counting(space, name, inputs, start):
         solved.append(name)
         return real(space, name, inputs, start)
 
-    monkeypatch.setattr(interval_module, "_solve", counting)
+    monkeypatch.setattr(interval_module, "solve_planned", counting)
     return solved
 
 
