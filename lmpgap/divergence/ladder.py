@@ -117,7 +117,8 @@ def closest_to(
     wide = prices[prices["interval_start"].isin(intervals)].pivot(
         index=["interval_start", "bus"], columns="formulation", values="lmp"
     )
-    wide = wide[[*others, truth]].dropna()
+    # Without an interval in which all are certified the pivot has no columns at all.
+    wide = wide.reindex(columns=[*others, truth]).dropna()
     if wide.empty:
         return pd.DataFrame(columns=columns)
     error = wide[others].sub(wide[truth], axis=0).abs()

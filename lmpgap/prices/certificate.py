@@ -128,7 +128,7 @@ def certify(
         price_residual = split.price_residual
         marginal_error = marginal_costs(network, inputs, result, split.lmp, tolerances).largest_error
         losses = losses_mw(network, inputs, result)
-        faults += _residual_faults(network, result, price_residual, marginal_error, tolerances)
+        faults += _residual_faults(network, inputs, result, split, marginal_error, tolerances)
     cost_gap = _cost_gap(result, ac)
     loop_angle_deg = result.loop_angle_deg if result.relaxed else float("nan")
 
@@ -173,20 +173,20 @@ def losses_mw(network: Network, inputs: IntervalInputs, result: DispatchResult) 
 
 def _residual_faults(
     network: Network,
+    inputs: IntervalInputs,
     result: DispatchResult,
-    price_residual: float,
+    split: PriceSplit,
     marginal_error: float,
     tolerances: Tolerances,
 ) -> list[str]:
     """Return one sentence per figure that is out of tolerance; ``nan`` is out of any tolerance."""
     base = network.base_mva
-    fixed = float(np.sum(np.abs(result.resource_cost)))
-    gap_scale = max(abs(result.objective), fixed, 1.0)
+    gap_scale = _turnover(network, inputs, result, split)
     figures = [
         ("violation of a balance or limit", result.residuals.primal * base, tolerances.primal_residual_mw, "MW"),
         ("violation of stationarity", result.residuals.dual / base, tolerances.dual_residual, "$/MWh"),
         ("relative duality gap", result.residuals.gap / gap_scale, tolerances.duality_gap_relative, ""),
-        ("price residual", price_residual, tolerances.price_residual, "$/MWh"),
+        ("price residual", split.price_residual, tolerances.price_residual, "$/MWh"),
         ("marginal cost against price inside a segment", marginal_error, tolerances.dual_residual, "$/MWh"),
     ]
     if not result.relaxed and result.frozen is None:
@@ -199,6 +199,18 @@ def _residual_faults(
         for name, value, accepted, unit in figures
         if not abs(value) <= accepted
     ]
+
+
+def _turnover(network: Network, inputs: IntervalInputs, result: DispatchResult, split: PriceSplit) -> float:
+    """Return the money that a duality gap is measured against [$/h].
+
+    The cost alone will not do: it is zero in an hour of free output or without load, it cancels where some of it is
+    negative, and where limits are worth many times the cost a gap is a rounding of their worth. So it is also what
+    load pays at its prices, and never less than one dollar per MWh of the capacity in service.
+    """
+    payments = float(np.nansum(np.abs(split.lmp) * np.abs(inputs.load_p))) * network.base_mva
+    capacity = float(np.sum(np.abs(inputs.p_max))) * network.base_mva
+    return max(abs(result.objective), float(np.sum(np.abs(result.resource_cost))), payments, capacity, 1.0)
 
 
 def _cost_gap(result: DispatchResult, ac: DispatchResult | None) -> float | None:

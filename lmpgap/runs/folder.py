@@ -22,7 +22,7 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from lmpgap.errors import Fault, LmpgapError, RunFolderError
-from lmpgap.runs.schema import RUN_TABLES
+from lmpgap.runs.schema import RUN_TABLES, SOLVED_TABLES
 
 FORMAT = 1
 _PENDING = ".pending"
@@ -85,19 +85,49 @@ class RunFolder:
             Keep rows where a column has this value, e.g. ``formulation="ac"``; rows are left out while reading.
         """
         definition = RUN_TABLES[name]
-        folder = self.path / name
-        if not folder.is_dir() or not any(folder.glob("*.parquet")):
+        files = self._files(name)
+        if not files:
             empty = definition.empty()
             return empty if columns is None else empty[columns]
         filters = [(column, "==", value) for column, value in equals.items()] or None
         try:
-            frame = pd.read_parquet(folder, columns=columns, filters=filters)
+            frame = pd.read_parquet(files, columns=columns, filters=filters)
         except (OSError, pa.ArrowException) as error:
-            raise RunFolderError(
-                f"table {name!r} of {self.path} cannot be read ({error}); start a new run folder"
-            ) from error
+            raise RunFolderError(f"table {name!r} of {self.path} cannot be read ({error}): {_remedy(name)}") from error
         keys = [k for k in ("interval_start", "formulation") if k in frame.columns]
         return frame.sort_values(keys, kind="stable", ignore_index=True) if keys else frame
+
+    def _files(self, name: str) -> list[Path]:
+        """Return the files of a table; of solved tables those of finished chunks, none of which may be missing."""
+        files = {file.stem: file for file in sorted((self.path / name).glob("*.parquet"))}
+        ledger = self.path / "ledger"
+        if name not in SOLVED_TABLES or not ledger.is_dir():
+            return list(files.values())
+        chunks = sorted(file.stem for file in ledger.glob("*.json"))
+        missing = [chunk for chunk in chunks if chunk not in files]
+        if missing:
+            raise RunFolderError(
+                f"table {name!r} of {self.path} lacks {len(missing)} of {len(chunks)} files, the first is "
+                f"{missing[0]}.parquet: {_remedy(name)}"
+            )
+        return [files[chunk] for chunk in chunks]
+
+    def mend(self) -> int:
+        """Remove what is left of chunks that lost a file, so that they are solved again; return how many there were.
+
+        Files are deleted and cut short by hands and by disks; a run never leaves them so.
+        """
+        ledger = self.path / "ledger"
+        whole, broken = set(), set()
+        for file in ledger.glob("*.json"):
+            entry = (self.path / table / f"{file.stem}.parquet" for table in SOLVED_TABLES)
+            (whole if _is_object(file) and all(_is_whole(part) for part in entry) else broken).add(file.stem)
+        for table in SOLVED_TABLES:
+            broken |= {file.stem for file in (self.path / table).glob("*.parquet")} - whole
+        for chunk in sorted(broken):
+            files = [f"ledger/{chunk}.json", *(f"{table}/{chunk}.parquet" for table in SOLVED_TABLES)]
+            self.commit(chunk, remove=files)
+        return len(broken)
 
     def ledger(self) -> dict[str, dict[str, str]]:
         """Return the finished solves: ``{chunk: {"interval_start|formulation": key}}``."""
@@ -220,6 +250,33 @@ class RunFolder:
                 ) from error
             self.recover()
             yield
+
+
+def _remedy(name: str) -> str:
+    """Return what to do about a damaged table."""
+    return (
+        "run `lmpgap price` or `weekly` again, it solves what was lost"
+        if name in SOLVED_TABLES
+        else "run the command that made it again"
+    )
+
+
+def _is_object(file: Path) -> bool:
+    """Return whether a file holds a JSON object."""
+    try:
+        return isinstance(json.loads(file.read_text(encoding="utf-8")), dict)
+    except (OSError, ValueError):
+        return False
+
+
+def _is_whole(file: Path) -> bool:
+    """Return whether a Parquet file is there and has its end; a file that was cut short lacks the closing mark."""
+    try:
+        with open(file, "rb") as handle:
+            handle.seek(-4, os.SEEK_END)
+            return handle.read() == b"PAR1"
+    except OSError:
+        return False
 
 
 def _flush(file: Path) -> None:

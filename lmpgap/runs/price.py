@@ -78,6 +78,7 @@ def price(
     folder = RunFolder(run, create=True)
     with folder.writing():
         _check_settings(folder, plan)
+        folder.mend()
         folder.write_manifest(_manifest(folder, plan))
         wanted = _wanted(folder, plan)
         total, before = len(plan.positions), len(plan.positions) - len(wanted)

@@ -103,6 +103,9 @@ def _measure(network: Network, item: SolvedInterval, reference: SolvedInterval) 
     assert split is not None and true is not None  # noqa: PT018 - the caller has checked; told to the type checker
     base = network.base_mva
     load = item.inputs.load_p
+    priced = np.where(np.isfinite(split.lmp), load, 0.0)
+    # The mean on load; on buses where there is none.
+    weight = priced if priced.sum() > 0.0 else np.isfinite(split.lmp).astype(float)
     served = float((load - item.result.unserved).sum() + item.result.bid_served.sum())
     angle, true_angle = item.result.point.angle, reference.result.point.angle
     across = [x[network.from_bus] - x[network.to_bus] for x in (angle, true_angle)]
@@ -112,7 +115,7 @@ def _measure(network: Network, item: SolvedInterval, reference: SolvedInterval) 
         generation_mw=float(item.result.p.sum()) * base,
         losses_mw=float(item.result.point.loss.sum()) * base,
         cost=item.result.objective,
-        mean_price=float(np.nansum(load * split.lmp) / load.sum()),
+        mean_price=float(np.nansum(weight * split.lmp) / weight.sum()),
         price_error=float(np.nanmean(np.abs(split.lmp - true.lmp))),
         loss_component_error=float(np.nanmean(np.abs(split.loss - true.loss))),
         cost_error=item.result.objective - reference.result.objective,

@@ -58,6 +58,19 @@ class RunTables(Protocol):
         ...
 
 
+_NO_POSTED = (
+    "nothing to settle: none of the posted prices is of an interval and a node of the scenario; check the times and "
+    "the node names in posted"
+)
+
+
+def has_posted(scenario: Scenario) -> bool:
+    """Return whether any posted price is of an interval and a node of the scenario."""
+    posted, hubs = scenario.tables["posted"], scenario.tables["hubs"]
+    nodes = {*scenario.network.buses, *hubs["hub"]}
+    return bool((posted["interval_start"].isin(scenario.interval_starts) & posted["node"].isin(nodes)).any())
+
+
 def settle(
     run: RunTables,
     scenario: Scenario,
@@ -110,6 +123,8 @@ def settle(
     basket = NodeBasket.of(tables["buses"], tables["hubs"], scenario.network.buses)
     intervals = pd.DatetimeIndex(scenario.interval_starts)
     posted = order_posted(tables["posted"], basket.names, intervals).latest
+    if claim == POSTED and not posted["known"].any():
+        raise DataError(_NO_POSTED)
     gathered = gather_positions(positions)
     outside = gathered[~gathered["interval_start"].isin(intervals)]
     involved = intervals if not rights.empty else intervals[intervals.isin(gathered["interval_start"])]

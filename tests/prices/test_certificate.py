@@ -7,9 +7,10 @@ from dataclasses import fields, replace
 import numpy as np
 import pytest
 
-from lmpgap.dispatch.formulation import DispatchOptions
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.frozen import DeliveryFactorDispatch
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import SolveStatus, no_solution
 from lmpgap.prices.certificate import certify, losses_mw
 from lmpgap.prices.components import split_prices
@@ -19,6 +20,29 @@ from lmpgap.scenario.network import OfferSegments
 from lmpgap.tolerances import DEFAULT_TOLERANCES
 from tests.prices.solved import CASES, certified, checked, loaded, solved, split
 from tests.prices.support import lossless_dispatch, simple_inputs, small_network
+
+
+@pytest.mark.parametrize(
+    ("hour", "name"),
+    [
+        *(("without load", name) for name in ("dc", "dc-loss", "ac")),
+        # Not dc-loss: where output is free, so is losing it, and the certificate rightly names the loss it burns.
+        *(("of free output", name) for name in ("dc", "ac")),
+    ],
+)
+def test_an_hour_that_costs_nothing_is_certified(hour, name):
+    """A gap relative to a cost of zero is no measure: what an interior-point method leaves is always larger."""
+    network, inputs = loaded("case5")
+    if hour == "without load":
+        inputs = replace(inputs, load_p=0 * inputs.load_p, load_q=0 * inputs.load_q)
+    else:
+        zero = 0 * inputs.segments.price_start
+        inputs = replace(inputs, segments=replace(inputs.segments, price_start=zero, price_end=zero))
+    formulation = build_formulation(name, network, inputs.branch_in_service, DispatchOptions())
+    result = formulation.solve(inputs, FlowLimits.none(network.n_branch), None)
+    certificate = certify(network, inputs, result, split_prices(network, inputs.branch_in_service, result, np.ones(5)))
+    assert abs(certificate.objective) < 0.1
+    assert certificate.verdict == "certified", certificate.reasons
 
 
 @pytest.mark.parametrize("name", ["dc", "dc-loss", "ac"])

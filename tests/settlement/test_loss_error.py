@@ -8,11 +8,12 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from lmpgap.errors import DataError
 from lmpgap.settlement.common_reference import MEAN_REFERENCE, PARTIAL_REFERENCE
 from lmpgap.settlement.options import SettlementOptions
 from lmpgap.settlement.posted_reference import weighted_median
 from lmpgap.settlement.result import Settlement
-from lmpgap.settlement.settle import settle
+from lmpgap.settlement.settle import has_posted, settle
 from tests.settlement.world import (
     FakeRun,
     World,
@@ -370,3 +371,24 @@ def test_options_survive_the_record_and_reject_nonsense() -> None:
     for change in ({"basis": "rumour"}, {"rounding": -1.0}, {"rounding": "x"}, {"operating_points": "ac"}, {"new": 1}):
         with pytest.raises(DataError, match="cannot be used"):
             SettlementOptions.from_dict({**options.as_dict(), **change})
+
+
+@pytest.mark.parametrize("shift", ["another week", "another node"])
+def test_posted_prices_that_fit_no_interval_or_node_are_told(shift: str) -> None:
+    """They are in the scenario, so that nothing looks missing; each used to end elsewhere."""
+    intervals = hourly("2026-03-02T08:00", 2)
+    times = intervals + pd.Timedelta(weeks=1) if shift == "another week" else intervals
+    nodes = ("N1", "N2") if shift == "another week" else ("M1", "M2")
+    world = make_world(
+        ("N1", "N2"),
+        intervals,
+        positions=position_frame([("Co-op", intervals[0], "N1", 10.0)]),
+        posted=posted_frame(times, nodes, {"energy": np.array(30.0)}),
+    )
+    assert not has_posted(world)
+    run = FakeRun(
+        split_frame(intervals, ("N1", "N2"), "ac", energy=30.0, factor=np.array([1.0, 1.1])),
+        solve_frame(intervals, "ac"),
+    )
+    with pytest.raises(DataError, match="none of the posted prices is of an interval and a node of the scenario"):
+        settle(run, world, "posted", "ac", write=False)
