@@ -12,6 +12,19 @@ from lmpgap.divergence.ranking import divergence, rank_constraints
 from lmpgap.divergence.sentences import Wording, driver_sentences
 from lmpgap.prices.certificate import USABLE_VERDICTS
 
+_FINDING_WORDS: dict[str, tuple[str, str]] = {
+    "identity": ("price that is not the sum of its parts", "prices that are not the sum of their parts"),
+    "sign": ("stretch with the sign of congestion reversed", "stretches with the sign of congestion reversed"),
+    "stale-factors": ("node with delivery factors that stood still", "nodes with delivery factors that stood still"),
+    "unexplained-congestion": ("stretch of unexplained congestion", "stretches of unexplained congestion"),
+    "reversed-constraint": ("constraint that seems reversed", "constraints that seem reversed"),
+    "unknown-node": ("unknown node", "unknown nodes"),
+    "missing-interval": ("stretch of missing intervals", "stretches of missing intervals"),
+    "repeated-interval": ("repeated interval", "repeated intervals"),
+    "revised": ("revision", "revisions"),
+}
+"""One and several findings of each kind."""
+
 
 def weekly_sentences(
     *,
@@ -126,19 +139,24 @@ def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording)
     rows = differences[(differences["base"] == POSTED) & (differences["against"] == "ac")]
     if rows.empty:
         rows = differences[differences["base"] == POSTED]
-    if rows.empty:
-        return "There are no posted prices to check."
-    against = rows["against"].iloc[-1]
-    rows = rows[rows["against"] == against]
-    size = divergence(rows).abs()
     counts = findings["kind"].value_counts()
     ordered = [(kind, int(counts[kind])) for kind in KINDS if kind in counts]
     found = (
         "the checks found nothing"
         if not ordered
         else f"the checks found {len(findings)} matter{'s' if len(findings) > 1 else ''}: "
-        + ", ".join(f"{count} {kind}" for kind, count in ordered)
+        + ", ".join(f"{count} {_FINDING_WORDS[kind][count > 1]}" for kind, count in ordered)
     )
+    if rows.empty:
+        # Findings without a comparison: the prices are there, but none of an interval and a node that were solved.
+        return (
+            f"No posted price could be held against a computed one; {found}."
+            if ordered
+            else "There are no posted prices to check."
+        )
+    against = rows["against"].iloc[-1]
+    rows = rows[rows["against"] == against]
+    size = divergence(rows).abs()
     return (
         f"Posted prices differ from {against} by {size.mean():,.2f} {wording.unit} on average and by up to "
         f"{size.max():,.2f}; {found}."
@@ -152,6 +170,14 @@ def _hours(count: int) -> str:
 def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currency: str) -> str:
     if claims is None or claims.empty:
         return "There are no positions to settle."
+    without = ""
+    if "left_out" in claims:
+        left_out, held = int(claims["left_out"].sum()), int(claims["rows"].sum() + claims["left_out"].sum())
+        claims = claims[claims["rows"] > 0]
+        if claims.empty:
+            return f"None of the {held:,} position rows could be settled; the tables say why."
+        if left_out:
+            without = f"; without {left_out:,} of {held:,} position rows, which could not be settled"
     order = claims["amount"].abs().sort_values(ascending=False, kind="stable").index
     largest = claims.loc[order].head(3)
     figures = largest[["amount", "amount_low", "amount_high"]].to_numpy(float).tolist()
@@ -167,7 +193,7 @@ def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currenc
         if material == 0
         else f"{material} of {len(claims)} account{'s' if len(claims) > 1 else ''} can claim a material amount"
     )
-    return f"Loss component at stake, positive to the account's disadvantage: {told}; {verdict}."
+    return f"Loss component at stake, positive to the account's disadvantage: {told}{without}; {verdict}."
 
 
 def _against(account: str, name: str, claims: pd.DataFrame, currency: str) -> str:
