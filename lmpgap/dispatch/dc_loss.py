@@ -40,18 +40,25 @@ class DcLossDispatch(DcDispatch):
         Where more than the tolerated loss is fictitious, the result is that of the dispatch with losses held to those
         of its own flows, and says so in ``loss_slack_open`` and ``notes``.
         """
-        began = time.perf_counter()
-        relaxed = super().solve(inputs, flow_limits)
+        return self.finish(self.draft(inputs, flow_limits), inputs, flow_limits)
+
+    def draft(self, inputs: IntervalInputs, flow_limits: FlowLimits) -> DispatchResult:
+        """Return the dispatch with relaxed losses, which may be fictitious."""
+        return super().solve(inputs, flow_limits)
+
+    def finish(self, draft: DispatchResult, inputs: IntervalInputs, flow_limits: FlowLimits) -> DispatchResult:
+        """Return the dispatch with physical losses: the draft itself unless it holds too much fictitious loss."""
         tolerated = self.options.tolerances.fictitious_loss_mw / self.network.base_mva
-        if not relaxed.status.has_solution or relaxed.fictitious_loss <= tolerated:
-            return relaxed
+        if not draft.status.has_solution or draft.fictitious_loss <= tolerated:
+            return draft
         from lmpgap.dispatch.open_losses import resolve_open_slack
 
-        result = resolve_open_slack(self, relaxed, inputs, flow_limits)
+        began = time.perf_counter()
+        result = resolve_open_slack(self, draft, inputs, flow_limits)
         return replace(
             result,
-            solver_seconds=relaxed.solver_seconds + result.solver_seconds,
-            total_seconds=time.perf_counter() - began,
+            solver_seconds=draft.solver_seconds + result.solver_seconds,
+            total_seconds=draft.total_seconds + time.perf_counter() - began,
         )
 
     def _voltage_profile(self) -> FloatArray | None:

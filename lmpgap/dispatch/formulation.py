@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import Protocol
+from typing import Protocol, runtime_checkable
 
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.names import FORMULATIONS
@@ -39,6 +39,22 @@ class Formulation(Protocol):
             With ``status`` telling whether there is a solution; an infeasible interval is a result, not an
             exception.
         """
+        ...
+
+
+@runtime_checkable
+class DraftedFormulation(Formulation, Protocol):
+    """A formulation whose solve has a quick first half: ``solve`` is ``finish`` of ``draft``.
+
+    While limits are still being looked for the draft is good enough, and the second half is done once at the end.
+    """
+
+    def draft(self, inputs: IntervalInputs, flow_limits: FlowLimits) -> DispatchResult:
+        """Return a first solution, whose flows are nearly those of the last."""
+        ...
+
+    def finish(self, draft: DispatchResult, inputs: IntervalInputs, flow_limits: FlowLimits) -> DispatchResult:
+        """Return the solution; the draft itself where nothing is left to do. Its seconds include those of the draft."""
         ...
 
 

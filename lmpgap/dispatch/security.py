@@ -11,12 +11,15 @@ from dataclasses import replace
 
 import numpy as np
 
-from lmpgap.dispatch.formulation import Formulation
+from lmpgap.dispatch.formulation import DraftedFormulation, Formulation
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.outage_factors import OutageFactors, ViolatedPairs
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.scenario.network import IntArray, IntervalInputs
 from lmpgap.tolerances import Tolerances
+
+_NAMED = 10
+"""Contingencies that a note names."""
 
 
 def solve_secure(
@@ -46,22 +49,22 @@ def solve_secure(
     limits = base_limits
     added = 0
     known: set[tuple[int, int, int]] = set()
-    solver_seconds = total_seconds = 0.0
-    notes = tuple(
-        f"contingency {name} would split the network in this interval and is not enforced" for name in outages.splitting
-    )
+    notes = _splitting_note(outages.splitting)
     if start is not None and start.status.has_solution:
         pairs = _not_known(outages.screen(start.point.p_from, -tolerances.active_slack_mw), known)
         pairs = _worst(pairs, tolerances.pairs_per_round)
         limits, added = _extend(limits, outages, pairs, known, inputs), pairs.n_pair
-    result = formulation.solve(inputs, limits, start)
+    stage = _Stages(formulation, inputs, start)
+    result = stage.solve(limits)
     for round_number in range(1, tolerances.security_rounds + 1):
-        solver_seconds += result.solver_seconds
-        total_seconds += result.total_seconds
         if not result.status.has_solution:
             break
-        violated = outages.screen(result.point.p_from, tolerances.security_excess)
-        pairs = _worst(_not_known(violated, known), tolerances.pairs_per_round)
+        pairs = _violated(outages, result, known, tolerances)
+        if pairs.n_pair == 0 and not stage.finished:
+            result = stage.finish(result, limits)
+            if not result.status.has_solution:
+                break
+            pairs = _violated(outages, result, known, tolerances)
         if pairs.n_pair == 0:
             notes += (f"contingencies: {added} pairs enforced after {round_number} round(s)",) if added else ()
             break
@@ -70,13 +73,66 @@ def solve_secure(
                 f"contingencies: {pairs.n_pair} pairs still violated after {round_number} rounds, "
                 f"by up to {pairs.excess.max():.4g} pu",
             )
+            result = stage.finish(result, limits)
             break
         limits, added = _extend(limits, outages, pairs, known, inputs), added + pairs.n_pair
-        result = formulation.solve(inputs, limits, start)
+        result = stage.solve(limits)
     return (
-        replace(result, solver_seconds=solver_seconds, total_seconds=total_seconds, notes=result.notes + notes),
+        replace(
+            result,
+            solver_seconds=stage.solver_seconds,
+            total_seconds=stage.total_seconds,
+            notes=result.notes + notes,
+        ),
         limits,
     )
+
+
+class _Stages:
+    """Solves of one interval; where a formulation has drafts, only the last of them is finished."""
+
+    def __init__(self, formulation: Formulation, inputs: IntervalInputs, start: DispatchResult | None) -> None:
+        self._formulation, self._inputs, self._start = formulation, inputs, start
+        self.finished = True
+        self.solver_seconds = self.total_seconds = 0.0
+
+    def solve(self, limits: FlowLimits) -> DispatchResult:
+        if isinstance(self._formulation, DraftedFormulation):
+            result = self._formulation.draft(self._inputs, limits)
+            self.finished = False
+        else:
+            result = self._formulation.solve(self._inputs, limits, self._start)
+        self._spent(result, 1.0)
+        return result
+
+    def finish(self, draft: DispatchResult, limits: FlowLimits) -> DispatchResult:
+        if self.finished or not isinstance(self._formulation, DraftedFormulation):
+            return draft
+        result = self._formulation.finish(draft, self._inputs, limits)
+        self.finished = True
+        self._spent(draft, -1.0)
+        self._spent(result, 1.0)
+        return result
+
+    def _spent(self, result: DispatchResult, sign: float) -> None:
+        self.solver_seconds += sign * result.solver_seconds
+        self.total_seconds += sign * result.total_seconds
+
+
+def _violated(
+    outages: OutageFactors, result: DispatchResult, known: set[tuple[int, int, int]], tolerances: Tolerances
+) -> ViolatedPairs:
+    """Return the worst violated pairs that are not enforced yet."""
+    violated = outages.screen(result.point.p_from, tolerances.security_excess)
+    return _worst(_not_known(violated, known), tolerances.pairs_per_round)
+
+
+def _splitting_note(names: tuple[str, ...]) -> tuple[str, ...]:
+    """Return one sentence about the contingencies that no outage factor describes; names of the first few."""
+    if not names:
+        return ()
+    more = f" and {len(names) - _NAMED} more" if len(names) > _NAMED else ""
+    return (f"not enforced, would split the network in this interval: {', '.join(names[:_NAMED])}{more}",)
 
 
 def _extend(
