@@ -219,3 +219,20 @@ def test_a_soft_pair_stops_at_the_penalty() -> None:
     assert at_penalty.any()
     assert shadow_price[at_penalty] == pytest.approx(500.0, rel=1e-6)
     assert shadow_price.max() <= 500.0 * (1 + 1e-9)
+
+
+@pytest.mark.parametrize("seed", [3, 8])
+def test_drafts_with_fictitious_losses_leave_no_pair_violated(seed: int) -> None:
+    """At negative prices the draft burns hundreds of MW: pairs found on it alone would not secure the dispatch."""
+    network, inputs = random_network(seed)
+    segments = inputs.segments
+    below_zero = replace(segments, price_start=segments.price_start - 100.0, price_end=segments.price_end - 100.0)
+    inputs = replace(inputs, segments=below_zero)
+    result, limits = secure(network, inputs, "dc-loss")
+    assert result.loss_slack_open
+    assert abs(result.fictitious_loss) < 1e-5
+    outages = OutageFactors(network, inputs.branch_in_service, DcConvention())
+    assert outages.screen(result.point.p_from, 2e-5).n_pair == 0
+    directly = build_formulation("dc-loss", network, inputs.branch_in_service, DispatchOptions()).solve(inputs, limits)
+    assert result.objective == pytest.approx(directly.objective, rel=1e-9)
+    np.testing.assert_allclose(result.multipliers.active, directly.multipliers.active, rtol=1e-6)
