@@ -144,3 +144,15 @@ def test_reactive_load_that_nobody_can_supply_is_named(tmp_path: Path, name: str
     solve = at_hour(run, "solves", name, 1).iloc[0]
     assert solve["status"] == "infeasible"
     assert "Mvar are supplied at East" in solve["reasons"] or "voltage East lower" in solve["reasons"]
+
+
+@pytest.mark.parametrize("name", FORMULATIONS)
+def test_money_balances_with_limits_and_load_at_their_penalties(soft: RunFolder, name: str) -> None:
+    for hour in range(3):
+        money = at_hour(soft, "money", name, hour).set_index(["basis", "item"])["amount"]
+        for basis in ("components", "constraints"):
+            parts = money[basis].drop("remainder").sum()
+            assert abs(money["total", "surplus"] - parts) <= 1e-4 * abs(money["total", "load payments"])
+    beyond = at_hour(soft, "money", name, 1).set_index(["basis", "item"])["amount"]["constraints", "beyond limits"]
+    # 30 MW over the interface and 10 MW over both ratings, roughly, at 1500 $/MWh.
+    assert beyond == pytest.approx(1500.0 * (30.0 + 10.0), rel=0.05)
