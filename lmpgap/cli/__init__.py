@@ -1,7 +1,7 @@
 """The command line: one thin file per command group, wired together here.
 
 Each command parses, makes one library call and prints. Exit status: 0 done, 1 a data or solve error told in words,
-2 wrong usage.
+2 wrong usage, 130 stopped from the keyboard.
 """
 
 from __future__ import annotations
@@ -12,6 +12,9 @@ import typer
 
 from lmpgap import __version__
 from lmpgap.errors import LmpgapError
+
+STOPPED = 130
+"""Exit status of a program that was stopped from the keyboard; typer ends with it on its own, without a word."""
 
 app = typer.Typer(
     name="lmpgap",
@@ -51,11 +54,19 @@ def main() -> None:
         typer.echo(f"lmpgap: {error}", err=True)
         sys.exit(1)
     except KeyboardInterrupt:
-        typer.echo("lmpgap: stopped; finished intervals are kept, run the same command again to go on", err=True)
-        sys.exit(1)
+        _stopped()
+    except SystemExit as ended:
+        if ended.code != STOPPED:
+            raise
+        _stopped()
     except MemoryError:
         typer.echo("lmpgap: out of memory; try fewer --workers or a smaller network", err=True)
         sys.exit(1)
     except OSError as error:
         typer.echo(f"lmpgap: {error.strerror or error}: {error.filename or ''}".rstrip(": "), err=True)
         sys.exit(1)
+
+
+def _stopped() -> None:
+    typer.echo("lmpgap: stopped; what was stored is kept, run the same command again to go on", err=True)
+    sys.exit(STOPPED)

@@ -83,7 +83,9 @@ def _closeness(prices: pd.DataFrame, solves: pd.DataFrame, wording: Wording) -> 
     )
     best = errors["formulation"].iloc[0]
     hours = int(errors["intervals"].iloc[0])
-    return f"Over {_hours(hours)} {best} stayed closest to ac; on average prices missed it: {told}; {trust}."
+    return (
+        f"Over {_intervals(hours, wording)} {best} stayed closest to ac; on average prices missed it: {told}; {trust}."
+    )
 
 
 def _main_pair(differences: pd.DataFrame) -> tuple[str, str] | None:
@@ -102,7 +104,7 @@ def _furthest(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording
     rows = differences[(differences["base"] == pair[0]) & (differences["against"] == pair[1])]
     size = divergence(rows).abs()
     if not (size > 0.005).any():
-        return f"The prices of {pair[0]} and {pair[1]} agree to the cent at every bus in every hour."
+        return f"The prices of {pair[0]} and {pair[1]} agree to the cent at every bus in every {_noun(wording)}."
     (sentence,) = driver_sentences(rows.loc[[size.idxmax()]], drivers, wording)
     return f"The largest divergence: {sentence[0].lower()}{sentence[1:]}"
 
@@ -131,7 +133,7 @@ def _cause(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording) -
     top = constraints.iloc[0]
     return (
         f"{text}; the limit that matters most is {wording.name(str(top['constraint']))} "
-        f"({top['mean_absolute']:,.2f} on average, in {_hours(int(top['intervals']))})."
+        f"({top['mean_absolute']:,.2f} on average, in {_intervals(int(top['intervals']), wording)})."
     )
 
 
@@ -163,8 +165,13 @@ def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording)
     )
 
 
-def _hours(count: int) -> str:
-    return "1 hour" if count == 1 else f"{count} hours"
+def _noun(wording: Wording) -> str:
+    return "hour" if wording.labels.interval_minutes == 60 else "interval"
+
+
+def _intervals(count: int, wording: Wording) -> str:
+    """Return a number of intervals in words; only an interval of an hour is called one."""
+    return f"{count} {_noun(wording)}{'' if count == 1 else 's'}"
 
 
 def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currency: str) -> str:

@@ -5,6 +5,8 @@ from __future__ import annotations
 import json
 import os
 import platform
+import signal
+import threading
 import warnings
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
@@ -259,6 +261,9 @@ def _parallel(
 def _named_chunk(*arguments: Any) -> tuple[list[int], dict[str, pa.Table]]:
     from lmpgap.runs.interval import solve_chunk
 
+    if threading.current_thread() is threading.main_thread():
+        # A worker process: Ctrl-C reaches all of them, and the one that is in charge ends the others.
+        signal.signal(signal.SIGINT, signal.SIG_IGN)
     return [interval.position for interval in arguments[1]], solve_chunk(*arguments)
 
 
@@ -270,6 +275,8 @@ def _backend(cluster: str | None) -> Iterator[None]:
         with warnings.catch_warnings():
             # joblib tells when it replaces a worker; that is handled here.
             warnings.filterwarnings("ignore", message="A worker stopped while some jobs were given to the executor")
+            # ... and, when it is stopped, that tasks were dropped.
+            warnings.filterwarnings("ignore", message=".*tasks which were still being processed")
             with parallel_config(backend="loky", inner_max_num_threads=1):
                 yield
         return
