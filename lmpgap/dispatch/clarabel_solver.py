@@ -139,10 +139,13 @@ def _confirmed(program: ConicProgram, solution: ConicSolution, tolerances: Toler
     measured = residuals(program, solution)
     tolerance = 10.0 * tolerances.conic_feasibility
     price = 1.0 + float(np.abs(program.linear).max(initial=0.0))
+    # The solver's objective leaves the constant out, which may be the larger part of either.
+    cost = program.cost(solution.x)
+    size = 1.0 + max(abs(cost), abs(cost - program.constant))
     good = (
         measured.primal <= tolerance * (1.0 + float(np.abs(program.equality_rhs).max(initial=0.0)))
         and measured.dual <= tolerance * price
-        and measured.gap <= tolerance * (1.0 + abs(program.cost(solution.x)))
+        and measured.gap <= tolerance * size
     )
     return (
         replace(solution, status=SolveStatus.OPTIMAL, message=f"{solution.message}, confirmed by its residuals")
@@ -243,9 +246,10 @@ def _solve_once(
     ]
     quadratic = _diagonal(scale * program.quadratic[free])
     start = time.perf_counter()
-    solver = clarabel.DefaultSolver(
-        quadratic, scale * program.linear[free], stacked.a, stacked.b, cones, _settings(tolerances, attempt)
-    )
+    settings = _settings(tolerances, attempt)
+    if program.cone_sizes.size == 0:
+        settings.tol_gap_abs = settings.tol_gap_rel = tolerances.quadratic_gap
+    solver = clarabel.DefaultSolver(quadratic, scale * program.linear[free], stacked.a, stacked.b, cones, settings)
     answer = solver.solve()
     seconds = time.perf_counter() - start
     status = status_of(answer.status)
