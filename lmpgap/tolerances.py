@@ -40,6 +40,9 @@ class Tolerances:
     """Largest accepted violation of stationarity [$/MWh]; one cent is the rounding of posted prices."""
     duality_gap_relative: float = 1e-6
     """Largest accepted duality gap relative to the money that changes hands [-]."""
+    duality_gap_floor: float = 0.01
+    """A duality gap up to this is accepted whatever changes hands [$/h]: 1e-8 in the scaled units of the nonlinear
+    solver, on a hundred limits, is a tenth of a cent an hour, which on 100 MW moves no price by a thousandth of one."""
 
     restated_cost: float = 1e-6
     """Relative difference in cost up to which an independent restatement agrees [-]: both solvers stop at 1e-8 or

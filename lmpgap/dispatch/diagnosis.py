@@ -40,6 +40,9 @@ WORTH_NAMING_MW = 1e-3
 NAMED = 8
 """Relaxations named in the sentence, largest first."""
 
+_ALLOWED = 1e-3
+"""Weight of what a penalty allows anyway: it is no change of the data, and hard limits are what stands in the way."""
+
 _PENALTY_BLOCKS = ("unserved", "surplus", "excess", "flow limit excess")
 
 
@@ -156,11 +159,6 @@ def diagnose(
                 kind=block.kind, name=block.names[i], amount=float(amount[i] * block.to_unit), unit=block.unit
             )
             found.append((float(amount[i] * block.weight), relaxation))
-    for block_name in _PENALTY_BLOCKS:
-        if block_name in model.template.variables:
-            used = float(solution.x[model.template.variables[block_name]].sum()) * network.base_mva
-            if used > WORTH_NAMING_MW:
-                found.append((used, Relaxation(kind="penalty", name=block_name, amount=used, unit="MW")))
     found.sort(key=lambda pair: -pair[0])
     relaxations = tuple(relaxation for _, relaxation in found)
     return Diagnosis(sentence=_sentence(name, network, inputs, live.bus, relaxations), relaxations=relaxations)
@@ -209,7 +207,8 @@ def _elastic_blocks(
         ("balance", ("unserved", "surplus"), "MW"),
         ("reactive balance", ("reactive shortage", "reactive surplus"), "Mvar"),
     ):
-        if rows in template.equalities:
+        # At a penalty load goes unserved, and must-run output is taken away, without any change of the data.
+        if rows in template.equalities and not (rows == "balance" and "unserved" in template.variables):
             for kind, sign in zip(kinds, (1.0, -1.0), strict=True):
                 yield _Elastic(
                     kind=kind,
@@ -339,7 +338,7 @@ def _elastic_program(program: ConicProgram, model: ConvexModel, blocks: list[_El
     linear[n:] = np.concatenate(weights)
     for name in _PENALTY_BLOCKS:
         if name in model.template.variables:
-            linear[model.template.variables[name]] = 1.0
+            linear[model.template.variables[name]] = _ALLOWED
     # In the units of a cost, so that the tolerances of a cost fit.
     linear *= 1000.0
     inequality = sparse.vstack([widened("inequality", program.inequality), *bound_rows], format="csr")

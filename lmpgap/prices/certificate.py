@@ -181,11 +181,12 @@ def _residual_faults(
 ) -> list[str]:
     """Return one sentence per figure that is out of tolerance; ``nan`` is out of any tolerance."""
     base = network.base_mva
-    gap_scale = _turnover(network, inputs, result, split)
+    # A hundredth of a cent on each of a hundred MW: below that a gap says how small the market is.
+    gap = 0.0 if abs(result.residuals.gap) <= tolerances.duality_gap_floor else result.residuals.gap
     figures = [
         ("violation of a balance or limit", result.residuals.primal * base, tolerances.primal_residual_mw, "MW"),
         ("violation of stationarity", result.residuals.dual / base, tolerances.dual_residual, "$/MWh"),
-        ("relative duality gap", result.residuals.gap / gap_scale, tolerances.duality_gap_relative, ""),
+        ("relative duality gap", gap / _turnover(network, inputs, result, split), tolerances.duality_gap_relative, ""),
         ("price residual", split.price_residual, tolerances.price_residual, "$/MWh"),
         ("marginal cost against price inside a segment", marginal_error, tolerances.dual_residual, "$/MWh"),
     ]

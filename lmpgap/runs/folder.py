@@ -91,7 +91,7 @@ class RunFolder:
             return empty if columns is None else empty[columns]
         filters = [(column, "==", value) for column, value in equals.items()] or None
         try:
-            frame = pd.read_parquet(files, columns=columns, filters=filters)
+            frame: pd.DataFrame = pd.read_parquet(files, columns=columns, filters=filters)
         except (OSError, pa.ArrowException) as error:
             raise RunFolderError(f"table {name!r} of {self.path} cannot be read ({error}): {_remedy(name)}") from error
         keys = [k for k in ("interval_start", "formulation") if k in frame.columns]
@@ -118,7 +118,8 @@ class RunFolder:
         Files are deleted and cut short by hands and by disks; a run never leaves them so.
         """
         ledger = self.path / "ledger"
-        whole, broken = set(), set()
+        whole: set[str] = set()
+        broken: set[str] = set()
         for file in ledger.glob("*.json"):
             entry = (self.path / table / f"{file.stem}.parquet" for table in SOLVED_TABLES)
             (whole if _is_object(file) and all(_is_whole(part) for part in entry) else broken).add(file.stem)

@@ -166,3 +166,16 @@ def test_penalties_that_do_not_reach_far_enough() -> None:
     soft = DispatchOptions(penalties=Penalties(transmission=1500.0))
     found = diagnose("dc", network, scale_load(inputs, 6.0), FlowLimits.none(1), soft)
     assert any(r.kind == "unserved" for r in found.relaxations)
+
+
+def test_with_a_balance_penalty_only_hard_limits_are_in_the_way() -> None:
+    """20 MW are forced through the line, 10 MW can be produced: what the penalty allows anyway is no cause."""
+    network, inputs = grid([("1", "2", 0.0, 0.1, FREE)], [("1", 10.0, 20.0)], {"2": 5.0})
+    forced = network.with_changes(angle_min=np.array([0.02]))
+    soft = DispatchOptions(penalties=Penalties(power_balance=2000.0))
+    none = FlowLimits.none(network.n_branch)
+    assert solve("dc", forced, inputs, soft, none).status is SolveStatus.INFEASIBLE
+    found = diagnose("dc", forced, inputs, none, soft)
+    assert (
+        found.sentence == "The smallest change that makes it feasible: the limit angle L1 lower is widened by 0.573 deg"
+    )
