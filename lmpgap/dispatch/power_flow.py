@@ -268,8 +268,16 @@ class _System:
         reactive = q_network - q_injection
         return np.concatenate([np.where(self.dead, 0.0, active), np.where(self.dead | free, 0.0, reactive)])
 
-    def jacobian(self, state: _State) -> sparse.csc_array:
-        """Return derivatives of the network's injections: rows as in `mismatch`, columns angle, magnitude, missing."""
+    def jacobian(self, state: _State, equations: IntArray, unknowns: IntArray) -> sparse.csc_array:
+        """Return derivatives of the network's injections, (n_equation, n_unknown).
+
+        Parameters
+        ----------
+        equations
+            Chosen among the rows of `mismatch`.
+        unknowns
+            Chosen among angles, magnitudes and missing power, one after the other.
+        """
         network, n = self.network, self.network.n_bus
         magnitude = np.where(self.dead, 1.0, state.magnitude)
         c, s = voltage_products(network, state.magnitude, state.angle)
@@ -296,10 +304,18 @@ class _System:
         add(bus, n + bus, 2.0 * network.shunt_g * magnitude)
         add(n + bus, n + bus, -2.0 * network.shunt_b * magnitude)
         add(bus, 2 * n + self.island_of, -self.share)
-        return sparse.coo_array(
-            (np.concatenate(data), (np.concatenate(rows), np.concatenate(columns))),
-            shape=(2 * n, 2 * n + max(self.n_island, 1)),
-        ).tocsc()
+        row, column, value = (np.concatenate(parts) for parts in (rows, columns, data))
+        row = _positions(equations, 2 * n)[row]
+        column = _positions(unknowns, 2 * n + max(self.n_island, 1))[column]
+        kept = (row >= 0) & (column >= 0)
+        return sparse.csc_array((value[kept], (row[kept], column[kept])), shape=(equations.size, unknowns.size))
+
+
+def _positions(chosen: IntArray, n: int) -> IntArray:
+    """Return the place of each of n among the chosen ones, -1 for the others."""
+    position = np.full(n, -1, dtype=np.int64)
+    position[chosen] = np.arange(chosen.size)
+    return position
 
 
 def _product_and_turn(k: FlowCoefficients, c: FloatArray, s: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -330,7 +346,7 @@ def _newton(
         if iteration == max_iterations:
             break
         try:
-            full_step = splu(system.jacobian(state)[rows][:, columns].tocsc()).solve(-mismatch[rows])
+            full_step = splu(system.jacobian(state, rows, columns)).solve(-mismatch[rows])
         except RuntimeError:
             return state, iteration, "the equations are singular here"
         if not np.all(np.isfinite(full_step)):

@@ -8,6 +8,7 @@ currency per MWh. Arrays are in the order of the tables; positions are zero-base
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -19,6 +20,9 @@ if TYPE_CHECKING:  # scipy.sparse takes a third of a second to import, and `lmpg
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
+
+_TOPOLOGIES_KNOWN = 16
+"""Topologies whose islands are remembered; a week has a few, a screening of outages has thousands."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -145,7 +149,20 @@ class Network:
         return incidence(self.to_bus, self.n_bus)
 
     def islands(self, branch_in_service: BoolArray) -> IntArray:
-        """Return the island number of each bus, shape (n_bus,), counting from zero."""
+        """Return the island number of each bus, shape (n_bus,), counting from zero; read only."""
+        key = branch_in_service.tobytes()
+        if key not in self._islands_known:
+            while len(self._islands_known) >= _TOPOLOGIES_KNOWN:
+                del self._islands_known[next(iter(self._islands_known))]
+            self._islands_known[key] = self._find_islands(branch_in_service)
+        return self._islands_known[key]
+
+    @cached_property
+    def _islands_known(self) -> dict[bytes, IntArray]:
+        """Islands by topology: every step of an interval asks for them again."""
+        return {}
+
+    def _find_islands(self, branch_in_service: BoolArray) -> IntArray:
         from scipy import sparse
         from scipy.sparse import csgraph
 
@@ -154,7 +171,9 @@ class Network:
             (np.ones(on.size), (self.from_bus[on], self.to_bus[on])), shape=(self.n_bus, self.n_bus)
         )
         _, label = csgraph.connected_components(links, directed=False)
-        return np.asarray(label, dtype=np.int64)
+        island = np.asarray(label, dtype=np.int64)
+        island.setflags(write=False)
+        return island
 
     def with_changes(self, **changes: object) -> Network:
         """Return a copy with some arrays exchanged, e.g. another rating."""

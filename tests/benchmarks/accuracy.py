@@ -26,9 +26,10 @@ import pandas as pd
 from threadpoolctl import threadpool_limits
 
 from lmpgap.dispatch.ac_check import ac_check
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.names import FORMULATIONS
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import DispatchResult
 from lmpgap.prices.certificate import USABLE_VERDICTS, certify
 from lmpgap.prices.components import split_prices

@@ -74,8 +74,9 @@ def measure(trial: Trial) -> dict[str, Any]:
     import numpy as np
 
     from lmpgap.dispatch.ac_check import ac_check
-    from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+    from lmpgap.dispatch.formulation import build_formulation
     from lmpgap.dispatch.limits import FlowLimits
+    from lmpgap.dispatch.options import DispatchOptions
     from lmpgap.prices.certificate import certify
     from lmpgap.prices.components import split_prices
     from lmpgap.prices.uniqueness import price_intervals
@@ -84,8 +85,11 @@ def measure(trial: Trial) -> dict[str, Any]:
 
     network, inputs = load_published(trial.case)
     figures = published_figures().get(trial.case)
-    # The library's own convention of the linear dispatch, so that its cost can be compared.
-    options = DispatchOptions(dc=DcConvention(susceptance="impedance", taps=False), keep_stationarity=trial.uniqueness)
+    # The library's own convention for the lossless dispatch, so that its cost can be compared; the usual one otherwise.
+    library = DcConvention(susceptance="impedance", taps=False)
+    options = DispatchOptions(
+        dc=library if trial.formulation == "dc" else DcConvention(), keep_stationarity=trial.uniqueness
+    )
     limits = FlowLimits.none(network.n_branch)
     weights = np.maximum(inputs.load_p, 0.0)
     weights /= weights.sum()
@@ -129,9 +133,10 @@ def measure(trial: Trial) -> dict[str, Any]:
         row["soc_seconds"] = time.perf_counter() - began
     if trial.uniqueness and result.stationarity is not None:
         began = time.perf_counter()
-        low, high = price_intervals(result.stationarity, network.base_mva)
+        intervals = price_intervals(result.stationarity, network.base_mva)
         row["uniqueness_seconds"] = time.perf_counter() - began
-        row["not_unique"] = int(np.count_nonzero(high - low > options.tolerances.interval_width))
+        width = np.nan_to_num(intervals.high - intervals.low)
+        row["not_unique"] = int(np.count_nonzero(width > options.tolerances.interval_width))
     row["memory_mb"] = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024
     return row
 

@@ -8,8 +8,9 @@ import numpy as np
 import pytest
 from threadpoolctl import threadpool_limits
 
-from lmpgap.dispatch.formulation import DispatchOptions, build_formulation
+from lmpgap.dispatch.formulation import build_formulation
 from lmpgap.dispatch.limits import FlowLimits
+from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.security import solve_secure
 from lmpgap.scenario.network import Contingencies, Network
