@@ -40,6 +40,7 @@ from lmpgap.report.view.stakes import (
     stakes_table,
 )
 from lmpgap.report.view.trust import USABLE, trust_view
+from lmpgap.report.view.zones import zone_table
 from lmpgap.settlement.result import Settlement
 
 _ELSEWHERE = ("scenario", "inputs", "hashes", "sha256")
@@ -126,6 +127,7 @@ def build_view(
         constraints=constraints_view(checked["constraints"], cube, hours, currency),
         losses=losses_view(checked["solves"], checked["money"], cube, hours, currency, settings.hours),
         factors=factors_view(cube, checked["findings"], nodes, hours),
+        zones=zone_table(checked["drift"], main.against, currency),
         audit=audit_table(checked["audit"], hours),
         findings=findings_table(checked["findings"], hours),
         settlement=settlement_table(checked["settlement"], currency),

@@ -87,6 +87,17 @@ EXPECTED: dict[str, tuple[str, ...]] = {
     ),
     "audit": ("interval_start", "formulation", "finding", "element", "value", "limit", "unit"),
     "money": ("interval_start", "formulation", "item", "basis", "amount"),
+    "drift": (
+        "formulation",
+        "zone",
+        "before",
+        "after",
+        "component",
+        "price_before",
+        "price_after",
+        "price_change",
+        "weight_drift",
+    ),
     "sweep": (
         "load_factor",
         "formulation",

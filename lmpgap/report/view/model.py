@@ -255,6 +255,8 @@ class WeeklyView:
         The pair that the report opens with.
     ladder
         One pair per step from the barest to the fullest formulation.
+    zones
+        Day-to-day changes of zone prices and their weight drift.
     tracking
         How well each formulation tracks the alternating-current prices.
     inside : by (base, against), positions
@@ -287,6 +289,7 @@ class WeeklyView:
     constraints: ConstraintsView
     losses: LossesView
     factors: FactorsView | None
+    zones: Table
     audit: Table
     findings: Table
     settlement: Table
