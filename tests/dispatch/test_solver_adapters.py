@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import clarabel
 import highspy
@@ -292,3 +292,56 @@ def test_stationarity_system_holds_the_solvers_own_multipliers(name: str) -> Non
     # The entry at a balance row is the rise of cost per unit of load.
     assert system.multipliers[system.balance_rows] == pytest.approx(np.array(known.y, dtype=float), abs=1e-3)
     assert np.count_nonzero(~system.free) == {"dispatch": 1, "bounds": 2, "held": 2, "squares": 0, "disc": 1}[name]
+
+
+def test_a_hundred_and_twenty_thousand_dollars_do_not_hide_one_units_marginal_cost() -> None:
+    # 400 sloped units, one of them 2 kW short of its limit at the optimum: a relative gap of 1e-9 of the cost, all on
+    # that unit, would put its marginal cost several cents off the price.
+    n = 400
+    slope = np.linspace(1.0, 3.0, n)
+    price, near = 30.0, 7
+    x = (price - 10.0) / slope
+    upper = np.full(n, 100.0)
+    upper[near] = x[near] + 2e-3
+    known = ConicProgram(
+        linear=np.full(n, 10.0),
+        quadratic=slope,
+        constant=1e5,
+        equality=sparse.csr_array(np.ones((1, n))),
+        equality_rhs=np.array([x.sum()]),
+        inequality=sparse.csr_array((0, n)),
+        inequality_rhs=np.zeros(0),
+        lower=np.zeros(n),
+        upper=upper,
+        cone=sparse.csr_array((0, n)),
+        cone_rhs=np.zeros(0),
+        cone_sizes=np.zeros(0, dtype=np.int64),
+    )
+    answer, notes = clarabel_solver.solve_conic(known, DEFAULT_TOLERANCES)
+    assert answer.status is SolveStatus.OPTIMAL
+    assert notes == ()
+    assert answer.equality_dual == pytest.approx([price], abs=1e-4)
+    assert 10.0 + slope * answer.x == pytest.approx(np.full(n, price), abs=1e-3)
+
+
+@pytest.mark.parametrize(("constant", "confirmed"), [(0.0, False), (-1e8, True)])
+def test_an_early_stop_is_held_against_the_cost_that_the_solver_saw(constant: float, confirmed: bool) -> None:
+    # min 1e6 (a - 100) with a >= 100: cost 0 with the constant in it, 1e8 without. Complementarity of 0.5 $ is 5e-9 of
+    # the latter, within ten times the solver's tolerance.
+    problem = replace(program([1e6], lower=[100.0 if constant else 0.0], upper=[INF]), constant=constant)
+    at = 100.0 if constant else 0.0
+    early = ConicSolution(
+        status=SolveStatus.INACCURATE,
+        message="AlmostSolved",
+        solver="",
+        seconds=0.0,
+        iterations=1,
+        x=np.array([at + 5e-7]),
+        equality_dual=np.zeros(0),
+        inequality_dual=np.zeros(0),
+        lower_dual=np.array([1e6]),
+        upper_dual=np.zeros(1),
+        cone_dual=np.zeros(0),
+    )
+    status = clarabel_solver._confirmed(problem, early, DEFAULT_TOLERANCES).status
+    assert (status is SolveStatus.OPTIMAL) == confirmed
