@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import sparse
 
+from lmpgap.dispatch.sparse_rows import ScaledRows, stacked_rows
 from lmpgap.scenario.network import FloatArray, IntervalInputs, Network
 
 
@@ -71,21 +72,17 @@ def interface_limits(network: Network, inputs: IntervalInputs) -> FlowLimits:
     interfaces = network.interfaces
     if interfaces is None:
         return FlowLimits.none(network.n_branch)
-    parts = []
-    for sign, limits, direction in (
-        (1.0, inputs.interface_limit, "forward"),
-        (-1.0, inputs.interface_reverse_limit, "reverse"),
-    ):
-        rows = np.flatnonzero(np.isfinite(limits))
-        names = tuple(interfaces.names[i] for i in rows)
-        parts.append(
-            FlowLimits(
-                weights=sparse.csr_array(sign * interfaces.weights[rows]),
-                limit=limits[rows],
-                kind=("interface",) * rows.size,
-                contingency=("",) * rows.size,
-                monitored=names,
-                direction=(direction,) * rows.size,
-            )
-        )
-    return FlowLimits.concatenate(parts, network.n_branch)
+    forward = np.flatnonzero(np.isfinite(inputs.interface_limit))
+    reverse = np.flatnonzero(np.isfinite(inputs.interface_reverse_limit))
+    n_row = forward.size + reverse.size
+    return FlowLimits(
+        weights=stacked_rows(
+            [ScaledRows(interfaces.weights, forward, 1.0), ScaledRows(interfaces.weights, reverse, -1.0)],
+            network.n_branch,
+        ),
+        limit=np.concatenate([inputs.interface_limit[forward], inputs.interface_reverse_limit[reverse]]),
+        kind=("interface",) * n_row,
+        contingency=("",) * n_row,
+        monitored=tuple(interfaces.names[i] for i in (*forward.tolist(), *reverse.tolist())),
+        direction=("forward",) * forward.size + ("reverse",) * reverse.size,
+    )
