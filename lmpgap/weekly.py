@@ -124,6 +124,8 @@ def weekly_report(
             other_claims=None if settlement is None else _other_claims(settlement),
             currency=currency_sign(scenario),
             wording=wording(scenario),
+            n_posted=len(scenario.tables["posted"]),
+            n_position=len(scenario.tables["positions"]),
         )
     )
     view = build_view(tables, scenario, folder.manifest, sentences, posted=check.prices, settlement=settlement)

@@ -94,8 +94,11 @@ class AcProgram:
             - times(live.to_incidence, flows.q_to.value)
         )
         segment = value["segment"]
-        cost = casadi.dot(price["price"], segment) + 0.5 * casadi.dot(price["slope"], segment * segment)
-        cost -= casadi.dot(price["bid_price"], value["bid"])
+        cost = casadi.SX(0)
+        if segment.numel():  # casadi knows no product of nothing with nothing: a scenario may be without offers
+            cost += casadi.dot(price["price"], segment) + 0.5 * casadi.dot(price["slope"], segment * segment)
+        if value["bid"].numel():
+            cost -= casadi.dot(price["bid_price"], value["bid"])
         if options.penalties.power_balance is not None:
             active += value["unserved"] - value["surplus"]
             cost += options.penalties.power_balance * base * casadi.sum1(value["unserved"] + value["surplus"])

@@ -37,6 +37,8 @@ def weekly_sentences(
     other_claims: dict[str, pd.DataFrame] | None = None,
     currency: str = "$",
     wording: Wording | None = None,
+    n_posted: int = 0,
+    n_position: int = 0,
 ) -> list[str]:
     """Return the week in five sentences: how close, where furthest, why, the posted prices, the money.
 
@@ -51,14 +53,16 @@ def weekly_sentences(
         The same held against other formulations, by name: how far the figure depends on what it is held against.
     currency
         Sign or code before amounts.
+    n_posted, n_position
+        Rows of the scenario's tables: where there are some and nothing came of them, the sentence says that.
     """
     wording = wording or Wording()
     return [
         _closeness(prices, solves, wording),
         _furthest(differences, drivers, wording),
         _cause(differences, drivers, wording),
-        _posted(differences, findings, wording),
-        _money(claims, other_claims or {}, currency),
+        _posted(differences, findings, wording, n_posted),
+        _money(claims, other_claims or {}, currency, n_position),
     ]
 
 
@@ -104,6 +108,11 @@ def _furthest(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording
     rows = differences[(differences["base"] == pair[0]) & (differences["against"] == pair[1])]
     size = divergence(rows).abs()
     if not (size > 0.005).any():
+        if (rows["difference"].abs() > 0.005).any():
+            return (
+                f"The prices of {pair[0]} and {pair[1]} differ only where several prices are right: every difference "
+                "lies inside the interval of prices that the dispatch admits."
+            )
         return f"The prices of {pair[0]} and {pair[1]} agree to the cent at every bus in every {_noun(wording)}."
     (sentence,) = driver_sentences(rows.loc[[size.idxmax()]], drivers, wording)
     return f"The largest divergence: {sentence[0].lower()}{sentence[1:]}"
@@ -137,7 +146,7 @@ def _cause(differences: pd.DataFrame, drivers: pd.DataFrame, wording: Wording) -
     )
 
 
-def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording) -> str:
+def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording, n_posted: int) -> str:
     rows = differences[(differences["base"] == POSTED) & (differences["against"] == "ac")]
     if rows.empty:
         rows = differences[differences["base"] == POSTED]
@@ -153,7 +162,7 @@ def _posted(differences: pd.DataFrame, findings: pd.DataFrame, wording: Wording)
         # Findings without a comparison: the prices are there, but none of an interval and a node that were solved.
         return (
             f"No posted price could be held against a computed one; {found}."
-            if ordered
+            if ordered or n_posted
             else "There are no posted prices to check."
         )
     against = rows["against"].iloc[-1]
@@ -174,9 +183,13 @@ def _intervals(count: int, wording: Wording) -> str:
     return f"{count} {_noun(wording)}{'' if count == 1 else 's'}"
 
 
-def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currency: str) -> str:
+def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currency: str, n_position: int) -> str:
     if claims is None or claims.empty:
-        return "There are no positions to settle."
+        return (
+            f"None of the {n_position:,} position rows could be settled: there is no posted price to hold them against."
+            if n_position
+            else "There are no positions to settle."
+        )
     without = ""
     if "left_out" in claims:
         left_out, held = int(claims["left_out"].sum()), int(claims["rows"].sum() + claims["left_out"].sum())

@@ -91,7 +91,7 @@ class RunFolder:
             return empty if columns is None else empty[columns]
         filters = [(column, "==", value) for column, value in equals.items()] or None
         try:
-            frame: pd.DataFrame = pd.read_parquet(files, columns=columns, filters=filters)
+            frame: pd.DataFrame = pq.read_table(files, columns=columns, filters=filters).to_pandas()
         except (OSError, pa.ArrowException) as error:
             raise RunFolderError(f"table {name!r} of {self.path} cannot be read ({error}): {_remedy(name)}") from error
         keys = [k for k in ("interval_start", "formulation") if k in frame.columns]

@@ -52,6 +52,7 @@ def check_coverage(
                 "no branch has an emergency_rating_mva: no contingency can ever bind",
                 kind="no emergency rating",
             )
+    _check_intervals_of(tables, source, log)
     interfaces, limits = tables["interfaces"], tables["interface_limits"]
     limited = set(limits.text("interface").values)
     free = [name for name in dict.fromkeys(interfaces.text("interface").tolist()) if name not in limited]
@@ -98,6 +99,24 @@ def _check_offered(resources: ColumnTable, source: IntervalSource, log: FaultLog
             value=names.at(int(resource)),
             kind="no offer",
         )
+
+
+def _check_intervals_of(tables: Mapping[str, ColumnTable], source: IntervalSource, log: FaultLog) -> None:
+    """Warn of tables that are of no interval of the loads, and so are held against nothing.
+
+    Posted prices of a longer time than the scenario's are common and do no harm; of a position each row is money.
+    """
+    for name in ("posted", "posted_constraints", "delivery_factors", "positions"):
+        table = tables[name]
+        outside = int(np.count_nonzero(~np.isin(table.time("interval_start"), source.starts)))
+        if outside == table.n_row > 0 or (outside and name == "positions"):
+            count = "none of the rows is" if outside == table.n_row else f"{outside:,} of {table.n_row:,} rows are not"
+            log.warn(
+                table.file,
+                f"{count} of an interval of {tables['loads'].file}: nothing is held against them",
+                column="interval_start",
+                kind="outside the intervals",
+            )
 
 
 def _check_curve_range(tables: Mapping[str, ColumnTable], source: IntervalSource, log: FaultLog) -> None:

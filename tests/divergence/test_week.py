@@ -5,7 +5,9 @@ from __future__ import annotations
 import pandas as pd
 import pytest
 
+from lmpgap.divergence.labels import IntervalLabels
 from lmpgap.divergence.ladder import closest_to
+from lmpgap.divergence.sentences import Wording
 from lmpgap.divergence.week import weekly_sentences
 
 NOTHING = pd.DataFrame(columns=["interval_start", "base", "against", "bus", "difference", "inside_interval"])
@@ -75,3 +77,23 @@ def test_an_account_of_which_nothing_was_settled_has_no_amount():
 )
 def test_posted_prices_without_a_computed_one_beside_them(kinds: list[str], words: str):
     assert sentences(findings=pd.DataFrame({"kind": kinds}))[3] == words
+
+
+def test_tables_that_nothing_came_of_are_not_called_missing():
+    told = sentences(n_posted=15, n_position=6)
+    assert told[3] == "No posted price could be held against a computed one; the checks found nothing."
+    assert told[4] == ("None of the 6 position rows could be settled: there is no posted price to hold them against.")
+
+
+def test_differences_inside_the_price_intervals_are_not_called_agreement():
+    inside = pd.DataFrame([(HOUR, "dc", "ac", "N1", 9.8, True)], columns=NOTHING.columns)
+    assert sentences(differences=inside)[1] == (
+        "The prices of dc and ac differ only where several prices are right: every difference lies inside the interval "
+        "of prices that the dispatch admits."
+    )
+
+
+def test_quarter_hours_are_not_called_hours():
+    quarter = Wording(labels=IntervalLabels(interval_minutes=15))
+    assert sentences(wording=quarter)[0].startswith("Over 1 interval dc stayed closest to ac")
+    assert sentences()[0].startswith("Over 1 hour dc stayed closest to ac")

@@ -293,3 +293,17 @@ def test_inputs_may_be_changed_without_harm(tmp_path: Path) -> None:
             value += 1.0
     assert scenario.inputs(0).load_p[1] == pytest.approx(0.9)
     assert scenario.inputs(0).p_max[0] == pytest.approx(2.0)
+
+
+def test_tables_of_another_week_are_told(tmp_path: Path) -> None:
+    """Nothing would come of them, and nothing else would say why."""
+    other = "2025-03-07T23:00:00-07:00"
+    posted = f"interval_start,node,lmp\n{other},North,20\n"
+    held = "of an interval of loads.csv: nothing is held against them"
+    positions = f"account,interval_start,node,mw\nCo-op,{other},North,5\nCo-op,{HOURS[0]},North,5\n"
+    assert warnings(tmp_path, {"posted.csv": posted, "positions.csv": positions}) == [
+        f"posted.csv, column interval_start: none of the rows is {held}",
+        f"positions.csv, column interval_start: 1 of 2 rows are not {held}",
+    ]
+    longer = posted + f"{HOURS[0]},North,20\n"
+    assert warnings(tmp_path / "longer", {"posted.csv": longer}) == []
