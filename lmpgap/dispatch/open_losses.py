@@ -149,6 +149,9 @@ def resolve_open_slack(
     # Closing only what is open moves the burning to the next branch, pass after pass. With all losses on tangents near
     # the relaxed dispatch nothing can be burnt, and the prices show where losing would pay.
     on_tangent = _opened(formulation, relaxed, opens_from) | _nearly_pays(formulation, frozen, 0.0)
+    # A branch on which losing pays only while its loss is free: its cone opens, on its tangent losing costs. One that
+    # opens again after it left its tangent stays there, or it would go in and out for ever.
+    held = returned = np.zeros(network.n_branch, dtype=bool)
     best: DispatchResult | None = None
     nearly, apart = 0.0, np.inf
     seconds, passes, settled = frozen.solver_seconds, 0, False
@@ -166,6 +169,7 @@ def resolve_open_slack(
         flow = _mid_flow(result)
         # A cone whose loss is all but free keeps some of the solver's slack, which more passes do not take away.
         opened = ~on_tangent & (dispatch.excess > opens_from) & (result.fictitious_loss > tolerated)
+        held, returned = held | on_tangent, returned | (opened & held)
         before, apart = apart, float(np.sum(np.abs(dispatch.excess[on_tangent])))
         settled = apart <= SETTLED * tolerated and not opened.any()
         if opened.any():
@@ -176,7 +180,7 @@ def resolve_open_slack(
             nearly *= 0.25
         # Where losing costs clearly the cone is right; the distance between the two thresholds keeps branches from
         # going in and out for ever.
-        on_tangent = (on_tangent & _nearly_pays(formulation, result, 3.0 * nearly)) | opened
+        on_tangent = (on_tangent & _nearly_pays(formulation, result, 3.0 * nearly)) | opened | returned
     if best is None:
         message = f"feasible only by burning {burnt:.4g} MW that no flow causes; without it: {result.message}"
         return replace(result, message=message, loss_slack_open=True, solver_seconds=seconds)
