@@ -10,18 +10,12 @@ from __future__ import annotations
 import importlib.metadata
 import time
 from collections import OrderedDict
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
-from lmpgap.dispatch.ac_interval import (
-    AcVectors,
-    Movement,
-    flat_start,
-    interval_vectors,
-    start_from,
-    working_bounds,
-)
+from lmpgap.dispatch.ac_interval import AcVectors, Movement, flat_start, interval_vectors, start_from
+from lmpgap.dispatch.ac_ladder import FAR_OVERLOAD, Attempt, Start, ladder, overload_at, run_attempt
 from lmpgap.dispatch.ac_layout import AcShape
 from lmpgap.dispatch.ac_model import AcProgram
 from lmpgap.dispatch.ac_result import (
@@ -35,6 +29,7 @@ from lmpgap.dispatch.ac_result import (
     stationarity_system,
 )
 from lmpgap.dispatch.ac_rows import ac_constraints
+from lmpgap.dispatch.dc_loss import DcLossDispatch
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import bus_list, live_buses
 from lmpgap.dispatch.options import DispatchOptions
@@ -44,63 +39,11 @@ from lmpgap.scenario.network import BoolArray, FloatArray, IntervalInputs, Netwo
 
 SOLVER = f"Ipopt with MUMPS (casadi {importlib.metadata.version('casadi')})"
 
-STATUS = {
-    "Solve_Succeeded": SolveStatus.LOCALLY_OPTIMAL,
-    "Solved_To_Acceptable_Level": SolveStatus.INACCURATE,
-    "Infeasible_Problem_Detected": SolveStatus.INFEASIBLE,
-    "Maximum_Iterations_Exceeded": SolveStatus.LIMIT_REACHED,
-    "Maximum_CpuTime_Exceeded": SolveStatus.LIMIT_REACHED,
-    "Maximum_WallTime_Exceeded": SolveStatus.LIMIT_REACHED,
-}
-"""Ipopt's words for how it ended; every other word is `SolveStatus.FAILED`."""
-
 _INFEASIBLE_TWICE = 2
 """Infeasible from this many starts counts as infeasible: the answer of one start says little, a third adds little."""
 
-_MOST_ITERATIONS = 600
-"""Per attempt: networks of 10,000 buses take fewer than 100, and a solve that wanders should not hold up a week."""
-
-_WIDENED = 1e3
-"""Factor on the working ranges of unlimited outputs where the first ones held an output back."""
-
 _PROGRAMS_KEPT = 4
 """Programs kept per topology: the plain one, and the latest sets of added flow limits."""
-
-
-@dataclass(frozen=True, kw_only=True)
-class Attempt:
-    """One rung of the ladder of attempts.
-
-    Attributes
-    ----------
-    name
-        What is tried, in words, for the notes of the result.
-    from_start
-        Start from the given solution, if there is one; flat otherwise.
-    settings
-        Ipopt settings besides the common ones.
-    """
-
-    name: str
-    from_start: bool
-    settings: dict[str, object]
-
-
-LADDER = (
-    Attempt(name="the given start", from_start=True, settings={"mu_init": 1e-2}),
-    Attempt(name="a flat start", from_start=False, settings={}),
-    Attempt(
-        name="a flat start with an adaptive barrier",
-        from_start=False,
-        settings={"mu_strategy": "adaptive", "fixed_variable_treatment": "relax_bounds"},
-    ),
-    Attempt(
-        name="the given start with an adaptive barrier",
-        from_start=True,
-        settings={"mu_strategy": "adaptive", "fixed_variable_treatment": "relax_bounds"},
-    ),
-)
-"""Tried in this order until one succeeds; rungs that need a start are left out where none is given."""
 
 
 class AcDispatch:
@@ -190,15 +133,16 @@ class AcDispatch:
         notes: list[str] = []
         seconds, infeasible = 0.0, 0
         status, words = SolveStatus.FAILED, ""
-        for attempt in LADDER:
-            if attempt.from_start and given is None:
+        first = None if given is None else start_from(program, vectors, inputs, given)
+        far = first is not None and overload_at(program, vectors, first) > FAR_OVERLOAD
+        if far:
+            notes.append("the given start overloads a branch many times over")
+        for attempt in ladder(given=first is not None, far=far):
+            x, spent = self._start(program, vectors, inputs, flow_limits, attempt, first)
+            seconds += spent
+            if x is None:
                 continue
-            x = (
-                start_from(program, vectors, inputs, given)
-                if attempt.from_start and given is not None
-                else flat_start(program, vectors)
-            )
-            status, words, solution, spent = _run(program, vectors, inputs, x, attempt)
+            status, words, solution, spent = run_attempt(program, vectors, inputs, x, attempt, self._options.tolerances)
             seconds += spent
             if solution is not None:
                 best = status, words, solution
@@ -214,6 +158,26 @@ class AcDispatch:
             return self._without_solution(inputs, status, words, seconds, began, tuple(notes))
         status, words, solution = best
         return self._result(program, vectors, inputs, flow_limits, status, words, solution, seconds, began, notes)
+
+    def _start(
+        self,
+        program: AcProgram,
+        vectors: AcVectors,
+        inputs: IntervalInputs,
+        flow_limits: FlowLimits,
+        attempt: Attempt,
+        first: FloatArray | None,
+    ) -> tuple[FloatArray | None, float]:
+        """Return the point an attempt starts from, if there is one, and the seconds of a solver it took."""
+        if attempt.start is Start.GIVEN:
+            return first, 0.0
+        if attempt.start is Start.FLAT:
+            return flat_start(program, vectors), 0.0
+        linear = DcLossDispatch(
+            self._network, self._branch_in_service, replace(self._options, keep_stationarity=False)
+        ).solve(inputs, flow_limits)
+        found = linear.status.has_solution
+        return start_from(program, vectors, inputs, linear) if found else None, linear.solver_seconds
 
     def _impossible(self, program: AcProgram, inputs: IntervalInputs, vectors: AcVectors) -> str:
         """Return what rules out any dispatch before a solver sees it, in words; empty if nothing does."""
@@ -319,62 +283,3 @@ class AcDispatch:
             ),
             notes=tuple(notes),
         )
-
-
-def _run(
-    program: AcProgram, vectors: AcVectors, inputs: IntervalInputs, x: FloatArray, attempt: Attempt
-) -> tuple[SolveStatus, str, AcSolution | None, float]:
-    """Return the status, the solver's words, the solution where there is one, and the solver's seconds."""
-    seconds = 0.0
-    for widened in (1.0, _WIDENED):
-        bounds = working_bounds(program, vectors, inputs, widened)
-        status, words, solution, spent = _call(program, vectors, bounds, x, attempt)
-        seconds += spent
-        if solution is None or not _held_by_working_bounds(vectors, bounds, solution.x):
-            break
-    return status, words, solution, seconds
-
-
-def _held_by_working_bounds(vectors: AcVectors, bounds: tuple[FloatArray, FloatArray], x: FloatArray) -> bool:
-    """Return whether a bound that is none of the dispatch's stands in the way."""
-    lower, upper = bounds
-    half = 0.5 * (upper - lower)  # the middle half of a working range is well inside it
-    low = np.isinf(vectors.lower) & np.isfinite(lower) & (x - lower < 0.5 * half)
-    high = np.isinf(vectors.upper) & np.isfinite(upper) & (upper - x < 0.5 * half)
-    return bool(np.any(low | high))
-
-
-def _call(
-    program: AcProgram,
-    vectors: AcVectors,
-    bounds: tuple[FloatArray, FloatArray],
-    x: FloatArray,
-    attempt: Attempt,
-) -> tuple[SolveStatus, str, AcSolution | None, float]:
-    lower, upper = bounds
-    solver = program.solver({"max_iter": _MOST_ITERATIONS, **attempt.settings})
-    began = time.perf_counter()
-    try:
-        answer = solver(
-            x0=x,
-            p=vectors.parameter,
-            lbx=lower,
-            ubx=np.maximum(lower, upper),
-            lbg=vectors.row_lower,
-            ubg=np.maximum(vectors.row_lower, vectors.row_upper),
-        )
-    except RuntimeError as failure:
-        # casadi turns whatever its plugin throws into this; one interval must not end a run.
-        return SolveStatus.FAILED, str(failure).strip().splitlines()[-1], None, time.perf_counter() - began
-    seconds = time.perf_counter() - began
-    words = str(solver.stats()["return_status"])
-    status = STATUS.get(words, SolveStatus.FAILED)
-    vector = {name: np.asarray(answer[name], dtype=float).ravel() for name in ("x", "lam_x", "lam_g")}
-    if status.has_solution and not all(np.all(np.isfinite(values)) for values in vector.values()):
-        status = SolveStatus.FAILED
-    solution = AcSolution(
-        x=vector["x"],
-        bound_multiplier=vector["lam_x"] / program.objective_scale,
-        row_multiplier=vector["lam_g"] / program.objective_scale,
-    )
-    return status, words.replace("_", " ").lower(), solution if status.has_solution else None, seconds
