@@ -32,19 +32,15 @@ def test_order_of_attempts(given: bool, far: bool, starts: list[Start]) -> None:
 
 def test_a_start_with_absurd_angles_gives_way_to_the_linear_dispatch() -> None:
     network, inputs = load_network("case14")
-    cone = grids.solve("soc", network, inputs)
-    dispatch = AcDispatch(network, inputs.branch_in_service, DispatchOptions())
-    limits = FlowLimits.none(network.n_branch)
-    usual = dispatch.solve(inputs, limits, cone)
     # A short branch across which the angles gape: its flow is hundreds of times its rating.
     first = np.arange(network.n_branch) == 0
     short = replace(network, r=np.where(first, 1e-5, network.r), x=np.where(first, 1e-4, network.x))
+    cone = grids.solve("soc", short, inputs)
     wild = replace(cone, point=replace(cone.point, angle=np.linspace(0.0, 2.0, network.n_bus)))
-    other = AcDispatch(short, inputs.branch_in_service, DispatchOptions())
-    plain = other.solve(inputs, limits, cone)
-    result = other.solve(inputs, limits, wild)
-    assert usual.status is plain.status is result.status is SolveStatus.LOCALLY_OPTIMAL
-    assert usual.notes == plain.notes == ()
+    dispatch, limits = AcDispatch(short, inputs.branch_in_service, DispatchOptions()), FlowLimits.none(20)
+    plain, result = (dispatch.solve(inputs, limits, start) for start in (cone, wild))
+    assert plain.status is result.status is SolveStatus.LOCALLY_OPTIMAL
+    assert plain.notes == ()
     assert result.notes == (
         "the given start overloads a branch many times over",
         "solved from the linear dispatch with losses",
