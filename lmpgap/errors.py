@@ -6,11 +6,8 @@
     ├── DataError               the inputs: carries every fault found, not only the first
     │   ├── ScenarioError       a scenario folder
     │   └── RunFolderError      a run folder: damaged, in use, or made with other settings
-    ├── SolveError              a dispatch that has no usable solution
-    │   ├── InfeasibleError     no dispatch satisfies the limits
-    │   ├── UnboundedError      the cost has no lower bound: a sign or a limit is missing
+    ├── SolveError              a dispatch that has no usable solution (an infeasible hour is a result, not an error)
     │   └── NumericalError      the solver stopped without an answer
-    ├── NotCertifiedError       a price was asked of a solve that did not pass its certificate
     ├── NotIdentifiableError    the data do not determine the figure that was asked for
     └── MissingExtraError       an optional dependency is not installed
 """
@@ -109,20 +106,8 @@ class SolveError(LmpgapError):
     """A dispatch without a usable solution."""
 
 
-class InfeasibleError(SolveError):
-    """No dispatch satisfies every limit."""
-
-
-class UnboundedError(SolveError):
-    """The cost can fall without end."""
-
-
 class NumericalError(SolveError):
     """The solver stopped without an answer."""
-
-
-class NotCertifiedError(LmpgapError):
-    """A price was requested from a solve that failed its certificate."""
 
 
 class NotIdentifiableError(LmpgapError):

@@ -22,7 +22,7 @@ def check(
         typer.Argument(metavar="SCENARIO", help="Scenario folder: scenario.toml and its tables."),
     ] = None,
     tables: Annotated[
-        bool, typer.Option("--tables", help="Print what every table and setting means, and read nothing.")
+        bool, typer.Option("--tables", help="Print what every table (of scenarios and runs) and setting means.")
     ] = False,
     json: JsonOption = False,
 ) -> None:
@@ -78,5 +78,9 @@ def _print_tables(json: bool) -> None:
             }
         )
         return
+    from lmpgap.runs.schema import schema_as_text
+
     echo(tables_as_markdown())
     echo(settings_as_markdown())
+    echo("## Tables of a run folder\n")
+    echo(schema_as_text())

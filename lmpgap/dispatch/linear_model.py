@@ -29,11 +29,6 @@ class LinearBranches:
     shift: FloatArray
     loss_factor: FloatArray
 
-    @property
-    def conductance(self) -> FloatArray:
-        """Loss per squared angle across the branch [pu/rad^2], shape (n_branch,)."""
-        return self.loss_factor * self.susceptance**2
-
 
 def linear_branches(
     network: Network, convention: DcConvention, voltage_profile: FloatArray | None = None

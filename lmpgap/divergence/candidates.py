@@ -11,7 +11,7 @@ from lmpgap.dispatch.limits import FlowLimits, interface_limits
 from lmpgap.dispatch.outage_factors import OutageFactors
 from lmpgap.dispatch.result import OperatingPoint, constraint_name
 from lmpgap.divergence.shift_factors import AngleResponse
-from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, IntervalInputs, Network
+from lmpgap.scenario.network import FloatArray, IntArray, IntervalInputs, Network
 
 CONTINGENCY_LOADING = 0.8
 """Contingency pairs below this share of their emergency rating after the outage are no candidates [-]: they are many,
@@ -173,8 +173,3 @@ def _one_per_pair(limits: FlowLimits) -> FlowLimits:
         monitored=tuple(limits.monitored[i] for i in rows),
         direction=tuple(limits.direction[i] for i in rows),
     )
-
-
-def credible(candidates: Candidates, least: float) -> BoolArray:
-    """Return which candidates carry at least this share of their limit, in either direction."""
-    return np.asarray(np.abs(candidates.loading) >= least)

@@ -6,7 +6,7 @@ import numpy as np
 import pandas as pd
 
 from lmpgap.divergence.price_set import PriceSet
-from lmpgap.scenario.network import BoolArray, FloatArray
+from lmpgap.scenario.network import BoolArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES, Tolerances
 
 DIFFERENCE_COLUMNS = ("interval_start", "base", "against", "bus", "difference", "inside_interval")
@@ -47,14 +47,6 @@ def inside_interval(base: PriceSet, against: PriceSet, tolerances: Tolerances = 
     low = np.maximum(np.minimum(base.low, base.lmp), np.minimum(against.low, against.lmp))
     high = np.minimum(np.maximum(base.high, base.lmp), np.maximum(against.high, against.lmp))
     return np.asarray((width > tolerances.interval_width) & (low <= high))
-
-
-def least_difference(base: PriceSet, against: PriceSet) -> FloatArray:
-    """Return the part of the difference that no choice among admissible prices removes, (n_interval, n_bus).
-
-    Zero where the intervals overlap [$/MWh], with the sign of ``against - base``.
-    """
-    return np.asarray(np.maximum(against.low - base.high, 0.0) - np.maximum(base.low - against.high, 0.0))
 
 
 def constant(text: str, n_row: int) -> pd.Series[str]:
