@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import numpy as np
 import pandas as pd
 
 from lmpgap.divergence.drivers import BINDS_ONLY_IN_AGAINST, BINDS_ONLY_IN_BASE
@@ -82,8 +83,13 @@ def _closeness(prices: pd.DataFrame, solves: pd.DataFrame, wording: Wording) -> 
     if errors.empty:
         return f"{len(solves)} solves of {', '.join(held)} were made and none could be held against ac; {trust}."
     told = ", ".join(
-        f"{row.formulation} by {row.mean_absolute_error:,.2f} {wording.unit} ({row.relative:.1%})"
-        for row in errors.itertuples()
+        f"{name} by {error:,.2f} {wording.unit}" + (f" ({relative:.1%})" if np.isfinite(relative) else "")
+        for name, error, relative in zip(
+            errors["formulation"],
+            errors["mean_absolute_error"].astype(float),
+            errors["relative"].astype(float),
+            strict=True,
+        )
     )
     best = errors["formulation"].iloc[0]
     hours = int(errors["intervals"].iloc[0])
@@ -207,13 +213,21 @@ def _money(claims: pd.DataFrame | None, others: dict[str, pd.DataFrame], currenc
         + ")"
         for account, (amount, low, high) in zip(largest["account"], figures, strict=True)
     )
-    material = int(claims["material"].sum())
-    verdict = (
-        "none of it is certain enough to claim"
-        if material == 0
-        else f"{material} of {len(claims)} account{'s' if len(claims) > 1 else ''} can claim a material amount"
-    )
+    verdict = _certainty(claims)
     return f"Loss component at stake, positive to the account's disadvantage: {told}{without}; {verdict}."
+
+
+def _certainty(claims: pd.DataFrame) -> str:
+    """Return for how many accounts the error is certain, told apart by whom it hurts."""
+    too_much = int((claims["material"] & (claims["amount"] > 0.0)).sum())
+    too_little = int((claims["material"] & (claims["amount"] < 0.0)).sum())
+    told = [
+        f"{count} {words}" for count, words in ((too_much, "paid too much"), (too_little, "paid too little")) if count
+    ]
+    if not told:
+        return "none of it is certain enough to claim"
+    accounts = f"{len(claims)} account{'s' if len(claims) > 1 else ''}"
+    return f"certain and material for {too_much + too_little} of {accounts}: {' and '.join(told)}"
 
 
 def _against(account: str, name: str, claims: pd.DataFrame, currency: str) -> str:

@@ -52,7 +52,8 @@ def test_no_hour_in_which_all_are_certified():
 def test_positions_that_could_not_be_settled_are_told_with_the_money():
     told = sentences(claims=claims(("Co-op", 2, 1, 50.0), ("Wind", 3, 0, 20.0)))[-1]
     assert "Co-op $50 (between $49 and $51); Wind $20" in told
-    assert "; without 1 of 6 position rows, which could not be settled; 2 of 2 accounts can claim" in told
+    assert "; without 1 of 6 position rows, which could not be settled; certain" in told
+    assert told.endswith("certain and material for 2 of 2 accounts: 2 paid too much.")
 
 
 def test_an_account_of_which_nothing_was_settled_has_no_amount():
@@ -97,3 +98,11 @@ def test_quarter_hours_are_not_called_hours():
     quarter = Wording(labels=IntervalLabels(interval_minutes=15))
     assert sentences(wording=quarter)[0].startswith("Over 1 interval dc stayed closest to ac")
     assert sentences()[0].startswith("Over 1 hour dc stayed closest to ac")
+
+
+def test_an_account_in_whose_favour_the_error_is_has_nothing_to_claim():
+    frame = claims(("Co-op", 2, 0, 50.0), ("Wind", 3, 0, -20.0)).assign(material=True)
+    assert sentences(claims=frame)[-1].endswith(
+        "; certain and material for 2 of 2 accounts: 1 paid too much and 1 paid too little."
+    )
+    assert sentences(claims=frame.assign(material=False))[-1].endswith("none of it is certain enough to claim.")
