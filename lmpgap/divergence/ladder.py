@@ -88,6 +88,10 @@ def ladder(
     return pd.DataFrame(rows, columns=columns)
 
 
+_NO_LEVEL = 0.005
+"""Prices that round to zero cents on average are no measure for an error [$/MWh]."""
+
+
 def closest_to(
     prices: pd.DataFrame, solves: pd.DataFrame, truth: str = "ac", formulations: Sequence[str] | None = None
 ) -> pd.DataFrame:
@@ -132,7 +136,7 @@ def closest_to(
             "excluded": every - len(by_interval),
             "mean_absolute_error": error.mean().to_numpy(),
             "largest_error": error.max().to_numpy(),
-            "relative": error.mean().to_numpy() / level if level > 0.0 else np.nan,
+            "relative": error.mean().to_numpy() / level if level > _NO_LEVEL else np.nan,
             "best_intervals": [int(best.get(name, 0)) for name in others],
         }
     )

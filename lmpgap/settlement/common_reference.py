@@ -181,7 +181,8 @@ def on_common_reference(prices: PriceSet, reference: CommonReference, smallest_e
     positive, negative = np.maximum(signed, 0.0), np.maximum(-signed, 0.0)
 
     def mean(values: FloatArray, weight: FloatArray) -> FloatArray:
-        return _island_sum(np.where(weight == 0.0, 0.0, weight * values), reference)
+        # A range may be endless where it has no weight.
+        return _island_sum(weight * np.where(weight == 0.0, 0.0, values), reference)
 
     return CommonPrices(
         lmp=prices.lmp,

@@ -41,6 +41,9 @@ from lmpgap.settlement.price_set import PriceSet, TextArray
 RELAXATION = "soc"
 TRUTH_OF_RELAXATION = "ac"
 
+_NO_PART = 1e-9
+"""A factor smaller than this is the rounding of a factor of zero [-]; an endless range would make much of it."""
+
 
 @dataclass(frozen=True, kw_only=True)
 class ComponentError:
@@ -255,8 +258,15 @@ def _rest_range(common: CommonPrices) -> tuple[FloatArray, FloatArray]:
 
 
 def _scaled(factor: FloatArray, down: FloatArray, up: FloatArray) -> tuple[FloatArray, FloatArray]:
+    # A price may be bounded by nothing; no part of an endless range is none of it.
+    factor = np.where(np.abs(factor) < _NO_PART, 0.0, factor)
     positive, negative = np.maximum(factor, 0.0), np.maximum(-factor, 0.0)
-    return positive * down + negative * up, positive * up + negative * down
+    return _product(positive, down) + _product(negative, up), _product(positive, up) + _product(negative, down)
+
+
+def _product(weight: FloatArray, width: FloatArray) -> FloatArray:
+    """Return weight times width; nothing where the weight is, however wide."""
+    return np.where(weight == 0.0, 0.0, weight * np.where(weight == 0.0, 0.0, width))
 
 
 def _relaxation_error(

@@ -150,7 +150,10 @@ def _amounts(
     posted, reference = _pick(error.posted, at, where), _pick(error.reference, at, where)
     amount = energy_mwh * (posted - reference)
     size, pays = np.abs(energy_mwh), energy_mwh >= 0.0
-    down, up = _pick(error.uniqueness_down, at, where), _pick(error.uniqueness_up, at, where)
+    # A position of nothing pays nothing, however far its price may range.
+    down, up = (
+        np.where(size == 0.0, 0.0, _pick(width, at, where)) for width in (error.uniqueness_down, error.uniqueness_up)
+    )
     money = {
         "posted": posted,
         "reference": reference,

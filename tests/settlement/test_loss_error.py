@@ -229,6 +229,22 @@ def test_uniqueness_widens_by_the_energy_range() -> None:
     assert by.loc["delivery-factor", "amount_high"] == pytest.approx(by.loc["delivery-factor", "amount"])
 
 
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("mw", [100.0, -100.0, 0.0])
+@pytest.mark.parametrize("factor", [0.0, 1e-15, 0.02])
+def test_a_price_that_nothing_bounds_leaves_no_undefined_amount(factor: float, mw: float) -> None:
+    """Zero times an endless range is none of it: a bound is a figure, or endless, and never undefined."""
+    by = two_node_settlement(one_hour("ac", factor=factor, width=np.inf), mw=mw)
+    bounds = by[["amount", "amount_low", "amount_high", "independent_low", "independent_high"]]
+    assert not bounds.isna().any(axis=None)
+    assert (by["amount_low"] <= by["amount"]).all()
+    assert (by["amount"] <= by["amount_high"]).all()
+    if mw == 0.0:
+        assert (bounds == 0.0).all(axis=None)
+    else:
+        assert np.isfinite(bounds.loc["loss"]).all() == (factor < 1e-9)
+
+
 def test_solver_residual_widens() -> None:
     by = two_node_settlement(one_hour("ac", residual=1e-3))
     assert by.loc["loss", "amount_high"] - by.loc["loss", "amount"] == pytest.approx(100 * 1e-3)
