@@ -151,12 +151,8 @@ def weights_for(prices: PriceSet, reference_weights: ReferenceWeights) -> FloatA
     """Return reference weights on the intervals and buses of a price set, (n_interval, n_bus), each row adding to one.
 
     Buses that the set does not hold drop out and the others share their weight in proportion: the reference is
-    then the same for every set on these buses, which is what a comparison needs.
-
-    Raises
-    ------
-    DataError
-        If no bus of the set has weight in some interval.
+    then the same for every set on these buses, which is what a comparison needs. Where none of them has weight, as when
+    prices are posted at a few nodes and the reference is another bus, it is the plain mean over the buses with a price.
     """
     if isinstance(reference_weights, pd.Series):
         row = reference_weights.reindex(prices.buses).fillna(0.0).to_numpy(float)
@@ -167,10 +163,11 @@ def weights_for(prices: PriceSet, reference_weights: ReferenceWeights) -> FloatA
     weights = np.where(np.isfinite(prices.lmp), weights, 0.0)
     total = weights.sum(axis=1)
     if (total == 0.0).any():
-        where = prices.intervals[int(np.argmin(np.abs(total)))]
-        raise DataError(
-            f"{prices.name}: no bus with a price has weight in the reference at {where}; choose another [reference]"
-        )
+        priced = np.isfinite(prices.lmp)
+        # An interval without any price keeps equal weights; there is nothing to move in it.
+        mean = np.where(priced.any(axis=1)[:, None], priced, True).astype(float)
+        weights = np.where(total[:, None] == 0.0, mean, weights)
+        total = weights.sum(axis=1)
     return np.asarray(weights / total[:, None])
 
 

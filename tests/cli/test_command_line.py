@@ -122,3 +122,56 @@ def test_main_is_the_installed_command() -> None:
 
     (entry,) = [e for e in entry_points(group="console_scripts") if e.name == "lmpgap"]
     assert entry.load() is main
+
+
+def strict_json(text: str) -> object:
+    """JSON as the standard has it: without NaN and Infinity."""
+
+    def refuse(constant: str) -> object:
+        raise ValueError(f"{constant} is no JSON")
+
+    return json.loads(text, parse_constant=refuse)
+
+
+@pytest.fixture(scope="module")
+def week(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Two hours with posted prices and positions, one of them without a node, and the run of them beside it."""
+    folder = tmp_path_factory.mktemp("json")
+    hourly_scenario(folder / "scenario", "case5", hours=2)
+    change_load(folder / "scenario", 1, 9.0)  # no dispatch serves this hour: its figures do not exist
+    start = "2026-03-07T0{}:00:00-07:00"
+    rows = [f"{start.format(hour)},{node},20.5,20,0.25,0.25" for hour in (0, 1) for node in ("B1", "B2", "B3")]
+    header = "interval_start,node,lmp,energy_component,congestion_component,loss_component\n"
+    (folder / "scenario" / "posted.csv").write_text(header + "\n".join(rows) + "\n")
+    rows = [f"Co-op,{start.format(hour)},{node},10" for hour in (0, 1) for node in ("B2", "Nowhere")]
+    (folder / "scenario" / "positions.csv").write_text("account,interval_start,node,mw\n" + "\n".join(rows) + "\n")
+    (folder / "scenario" / "hubs.csv").write_text("hub,bus,weight\nCentre,B2,1\nCentre,B3,1\n")
+    priced = run_main("price", "scenario", "--run", "run", cwd=folder)
+    assert priced.returncode == 0, priced.stderr
+    return folder
+
+
+@pytest.mark.parametrize(
+    ("arguments", "keys"),
+    [
+        (["check", "scenario"], {"usable", "warnings", "intervals"}),
+        (["price", "scenario", "--run", "run"], {"run", "formulations"}),
+        (["compare", "run"], {"base", "against", "buses", "intervals", "constraints", "positions"}),
+        (["compare", "run", "--base", "posted"], {"base", "against", "buses", "intervals", "constraints", "positions"}),
+        (["settle", "run"], {"claim", "against", "claims", "totals", "left_out", "deadlines", "exhibit"}),
+        (["verify", "run-exhibit"], {"stands", "findings", "checks"}),
+        (["areas", "run"], {"areas", "drift"}),
+        (["sweep", "scenario", "--from", "0.9", "--to", "9", "--steps", "2"], None),
+    ],
+    ids=lambda value: value[0] if isinstance(value, list) else "",
+)
+def test_json_is_strict_and_has_its_keys(week: Path, arguments: list[str], keys: set[str] | None) -> None:
+    done = run_main(*arguments, "--json", cwd=week)
+    assert done.returncode == 0, done.stderr
+    content = strict_json(done.stdout)
+    if keys is None:
+        assert isinstance(content, list)
+        assert {"load_factor", "formulation", "cost", "mean_price"} <= set(content[0])
+    else:
+        assert isinstance(content, dict)
+        assert keys <= set(content)

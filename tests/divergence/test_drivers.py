@@ -238,3 +238,15 @@ def test_missing_and_repeated_prices_are_told():
     run["prices"] = pd.concat([run["prices"], run["prices"].head(1)])
     with pytest.raises(DataError, match=r"bus B0 at .* stands twice"):
         price_set(run, "dc")
+
+
+def test_a_reference_without_a_price_gives_way_to_the_mean_of_those_that_are_there():
+    """Prices posted at a few nodes, components on another bus: the price differences need no reference at all."""
+    rng = np.random.default_rng(3)
+    base, against = (random_run(rng, name) for name in ("dc", "ac"))
+    bus = sorted(set(base["prices"]["bus"]))
+    elsewhere = pd.Series({"another bus": 1.0})
+    found = compare(base, against, base="dc", against="ac", reference_weights=elsewhere)
+    mean = compare(base, against, base="dc", against="ac", reference_weights=pd.Series(1.0, index=bus))
+    pd.testing.assert_frame_equal(found.differences, mean.differences)
+    pd.testing.assert_frame_equal(found.drivers, mean.drivers)

@@ -30,7 +30,11 @@ def check_components(solver: Solver, item: SolvedInterval) -> None:
     live = live_buses(item)
     total = split.energy + split.congestion + split.loss + split.reactive
     assert np.abs(split.lmp - total)[live].max() < 1e-6
-    assert np.abs(split.multiplier_price - split.lmp)[live].max() == split.price_residual < 1e-3
+    assert np.abs(split.multiplier_price - split.lmp)[live].max() == split.price_residual
+    # A cone solver may stop short of it, with congestion at penalties behind a branch of next to no impedance; such a
+    # price is refused by its certificate, and nothing else may be.
+    refused = any(reason.startswith("price residual") for reason in item.certificate.reasons)
+    assert split.price_residual < 1e-3 or (refused and item.certificate.verdict == "uncertified")
     assert np.abs(split.congestion_by_key.sum(axis=0) - split.congestion)[live].max() < 1e-6
     sources = split.reactive_sources
     assert sources is not None
