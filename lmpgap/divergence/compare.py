@@ -165,7 +165,8 @@ def weights_for(prices: PriceSet, reference_weights: ReferenceWeights) -> FloatA
     if (total == 0.0).any():
         priced = np.isfinite(prices.lmp)
         # An interval without any price keeps equal weights; there is nothing to move in it.
-        mean = np.where(priced.any(axis=1)[:, None], priced, True).astype(float)
+        empty = np.all(~priced, axis=1, keepdims=True)
+        mean = (priced | empty).astype(float)
         weights = np.where(total[:, None] == 0.0, mean, weights)
         total = weights.sum(axis=1)
     return np.asarray(weights / total[:, None])
