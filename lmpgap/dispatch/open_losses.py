@@ -181,7 +181,8 @@ def resolve_open_slack(
         # Where losing costs clearly the cone is right; the distance between the two thresholds keeps branches from
         # going in and out for ever.
         on_tangent = (on_tangent & _nearly_pays(formulation, result, 3.0 * nearly)) | opened | returned
-    if best is None:
+    if best is None or not (result.status.has_solution or frozen.status.has_solution):
+        # With physical losses the limits cannot be met: neither near the relaxed dispatch nor where tangents led.
         message = f"feasible only by burning {burnt:.4g} MW that no flow causes; without it: {result.message}"
         return replace(result, message=message, loss_slack_open=True, solver_seconds=seconds)
     note = (
