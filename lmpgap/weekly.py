@@ -11,6 +11,7 @@ from dataclasses import dataclass
 from datetime import date
 from itertools import pairwise
 from pathlib import Path
+from tempfile import TemporaryFile
 from typing import Any
 
 import numpy as np
@@ -100,6 +101,7 @@ def weekly_report(
     """
     if not isinstance(scenario, Scenario):
         scenario = read_scenario(scenario)
+    _check_writable(Path(out))
     folder = price(scenario, run, workers=workers, cluster=cluster, progress=progress, **settings)
     with folder.writing():
         progress(TASK, 0, len(_STEPS))
@@ -133,6 +135,24 @@ def weekly_report(
     index = update_index(report.parent, view, report)
     progress(TASK, len(_STEPS), len(_STEPS))
     return Weekly(run=folder, report=report, index=index, sentences=sentences)
+
+
+def _check_writable(out: Path) -> None:
+    """Tell before hours of solving, not after, that the report cannot be written.
+
+    Raises
+    ------
+    DataError
+        When the path is a folder, or its folder cannot be made or written.
+    """
+    if out.is_dir():
+        raise DataError(f"{out} is a folder; name the HTML file to write")
+    try:
+        out.parent.mkdir(parents=True, exist_ok=True)
+        with TemporaryFile(dir=out.parent):
+            pass
+    except OSError as error:
+        raise DataError(f"the report cannot be written to {out}: {error.strerror or error}") from error
 
 
 def check_run(scenario: Scenario, folder: RunFolder) -> PostedCheck:

@@ -79,6 +79,14 @@ def test_an_hour_without_solution_is_in_the_report(scenario: Path, tmp_path: Pat
     assert "smallest change that makes it feasible" in done.report.read_text(encoding="utf-8")
 
 
+def test_a_report_that_cannot_be_written_is_told_before_solving(scenario: Path, tmp_path: Path) -> None:
+    (tmp_path / "file").write_text("")
+    for out, words in ((tmp_path, "is a folder"), (tmp_path / "file" / "week.html", "cannot be written")):
+        with pytest.raises(lmpgap.LmpgapError, match=words):
+            lmpgap.weekly_report(scenario, tmp_path / "run", out)
+    assert not (tmp_path / "run").exists()
+
+
 def test_compare_keeps_the_pairs_that_are_there(scenario: Path, tmp_path: Path) -> None:
     run = lmpgap.price(lmpgap.read_scenario(scenario), run=tmp_path / "run", formulations=("dc", "dc-loss"))
     lmpgap.compare(run, "dc", "dc-loss")

@@ -130,5 +130,7 @@ def compare(
         echo_json({"base": base, "against": against, **{name: records(frame) for name, frame in rankings.items()}})
         return
     for title, frame in rankings.items():
+        for column in [c for c in ("interval_start", "largest_at") if c in frame and frame[c].dtype.kind == "M"]:
+            frame = frame.assign(**{column: read.hour_ending(frame[column]).to_numpy()})
         echo(f"\n{title}")
         echo_table(frame)
