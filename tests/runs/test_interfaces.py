@@ -1,6 +1,5 @@
 """Interfaces: weighted sums of flows, limited in both directions, hour by hour, from the files to the run tables."""
 
-
 import pytest
 
 from lmpgap.prices.certificate import USABLE_VERDICTS
