@@ -7,7 +7,7 @@ import re
 import numpy as np
 import pandas as pd
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 
 from lmpgap.divergence.compare import compare
@@ -84,6 +84,7 @@ def test_agreement_is_told_as_agreement():
 
 @settings(max_examples=30, deadline=None)
 @given(seed=st.integers(0, 2**32 - 1), parts=st.integers(1, 4))
+@example(seed=1342, parts=1)  # a difference of less than half a cent with parts of several dollars
 def test_figures_shown_add_up_to_the_difference_shown(seed, parts):
     rng = np.random.default_rng(seed)
     run = run_of(random_run(rng, "dc"), random_run(rng, "ac"))
@@ -94,11 +95,13 @@ def test_figures_shown_add_up_to_the_difference_shown(seed, parts):
         strict=True,
     ):
         head, _, body = text.partition(": ")
-        shown = float(re.search(r"(?:dc is) ([\d,.]+) \$/MWh", head)[1].replace(",", ""))
+        gap = re.search(r"(?:dc is) ([\d,.]+) \$/MWh", head)
+        assert (gap is None) == (round(100.0 * amount) == 0)
+        shown = 0.0 if gap is None else float(gap[1].replace(",", ""))
         figures = re.findall(r"(less )?([\d,]*\d\.\d\d) (?:from|outside)", body)
         total = sum((-1.0 if less else 1.0) * float(value.replace(",", "")) for less, value in figures)
         assert total == pytest.approx(shown, abs=1e-9)
-        assert ("below" in head) == (amount > 0)
+        assert gap is None or ("below" in head) == (amount > 0)
 
 
 def test_hours_are_told_in_local_time_and_the_second_autumn_hour_is_marked():
