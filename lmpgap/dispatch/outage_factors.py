@@ -101,6 +101,7 @@ class OutageFactors:
             else np.zeros(0, np.int64)
         )
         self._kept_blocks: list[tuple[IntArray, FloatArray]] | None = None
+        self._kept_factors: dict[int, FloatArray] = {}
         self._singles, self._multiples, splitting = self._classify()
         self.splitting = tuple(names[k] for k in splitting)
 
@@ -148,7 +149,7 @@ class OutageFactors:
         """Return the pairs as limits on weighted sums of from-end flows."""
         network, contingencies = self._network, self._contingencies
         rows, columns, data = [], [], []
-        needed = {int(k): self.factors(self._out[k]) for k in np.unique(pairs.contingency)}
+        needed = {int(k): self._factors_of(int(k)) for k in np.unique(pairs.contingency)}
         for row, (k, m, sign) in enumerate(zip(pairs.contingency, pairs.monitored, pairs.sign, strict=True)):
             out = self._out[k]
             rows.append(np.full(out.size + 1, row))
@@ -170,6 +171,15 @@ class OutageFactors:
             monitored=tuple(network.branches[m] for m in pairs.monitored),
             direction=tuple("forward" if sign > 0 else "reverse" for sign in pairs.sign),
         )
+
+    def _factors_of(self, contingency: int) -> FloatArray:
+        """Return the factors of one contingency; the same few are asked for hour after hour and are kept."""
+        if contingency not in self._kept_factors:
+            kept = sum(factors.size for factors in self._kept_factors.values())
+            if kept + self._network.n_branch > _CACHE_ELEMENTS:
+                self._kept_factors.clear()
+            self._kept_factors[contingency] = self.factors(self._out[contingency])
+        return self._kept_factors[contingency]
 
     @property
     def _contingencies(self) -> Contingencies:

@@ -52,7 +52,7 @@ def factor_age(
         raise DataError(
             f"{run.path} has no interval with operating points of every age from {min(ages)} to {max(ages)} h"
         )
-    settings = RunSettings.of(scenario, uniqueness=False)
+    settings = RunSettings.of(scenario, uniqueness=False, audit=False)
     plans = [Plan(scenario, ("dc-loss",), settings, positions, losses) for losses in (None, *sources)]
     total = len(plans) * len(positions)
     network_key = fingerprint(scenario.network)

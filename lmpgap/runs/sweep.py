@@ -51,7 +51,7 @@ def sweep(
         raise LmpgapError("load factors must be positive")
     chosen = tuple(name for name in FORMULATIONS if name in formulations or name == "ac")
     hours = [peak_position(scenario)] if positions is None else positions
-    plan = Plan(scenario, chosen, RunSettings.of(scenario, uniqueness=False), hours)
+    plan = Plan(scenario, chosen, RunSettings.of(scenario, uniqueness=False, audit=False), hours)
     network, network_key = scenario.network, fingerprint(scenario.network)
     rows: list[dict[str, object]] = []
     total = len(factors) * len(hours)
