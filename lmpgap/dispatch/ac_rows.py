@@ -10,7 +10,7 @@ from lmpgap.dispatch.ac_result import AcSolution
 from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows
+from lmpgap.dispatch.rows import apparent_power_rows, at_penalty, constraint_rows, flow_limit_rows
 from lmpgap.scenario.network import FloatArray, IntervalInputs
 
 
@@ -64,34 +64,7 @@ def _thermal(
         for end in ("from", "to")
     }
     soft = at_penalty(multiplier["from"] + multiplier["to"], excess, options.penalties.transmission, tolerances, base)
-    parts = []
-    for end, p, q, dp, dq in (
-        ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
-        ("to", point.p_to, point.q_to, point.dp_to, point.dq_to),
-    ):
-        size = np.hypot(p[rated], q[rated])
-        turn = p[rated] * dp[rated] + q[rated] * dq[rated]
-        gain = np.divide(turn, size, out=np.zeros_like(size), where=size > 0.0)
-        parts.append(
-            constraint_rows(
-                kind="thermal",
-                names=network.branches,
-                owner=rated,
-                direction=point.p_from[rated] >= 0.0,
-                unit="MVA",
-                to_unit=base,
-                limit=limit,
-                value=size,
-                slack=limit - size,
-                multiplier=multiplier[end],
-                angle_gain=gain,
-                n_branch=network.n_branch,
-                tolerances=tolerances,
-                base_mva=base,
-                gave_way=soft & ((multiplier[end] > tolerances.shadow_price * base) | (size >= limit)),
-            )
-        )
-    return parts
+    return apparent_power_rows(network, rated, point, multiplier, soft, tolerances)
 
 
 def _angle(

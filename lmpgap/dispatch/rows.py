@@ -1,16 +1,16 @@
-"""Turn multipliers of the convex formulations into constraint rows."""
+"""Turn multipliers into constraint rows, for all formulations."""
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from functools import lru_cache
 
 import numpy as np
 from scipy import sparse
 
 from lmpgap.dispatch.limits import FlowLimits
-from lmpgap.dispatch.result import ConstraintRows
-from lmpgap.scenario.network import BoolArray, FloatArray, IntArray
+from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
+from lmpgap.scenario.network import BoolArray, FloatArray, IntArray, Network
 from lmpgap.tolerances import Tolerances
 
 
@@ -69,6 +69,57 @@ def constraint_rows(
         angle_gain=_gain(owner[shown], None if angle_gain is None else angle_gain[shown], n_branch),
         at_penalty=np.zeros(shown.size, dtype=bool) if gave_way is None else gave_way[shown],
     )
+
+
+def apparent_power_rows(
+    network: Network,
+    rated: IntArray,
+    point: OperatingPoint,
+    multiplier: Mapping[str, FloatArray],
+    soft: BoolArray,
+    tolerances: Tolerances,
+) -> list[ConstraintRows]:
+    """Return the rows of MVA ratings at both ends of branches.
+
+    The direction is that of the active flow at the from end, so that both ends share a key.
+
+    Parameters
+    ----------
+    rated : (n,)
+        Positions of the branches with a rating.
+    multiplier
+        By end, ``"from"`` and ``"to"``: fall of cost per unit of rating, each (n,) [$/h per pu].
+    soft : (n,)
+        True where the branch's shadow price stands at its penalty.
+    """
+    base, limit = network.base_mva, network.normal_rating[rated]
+    parts = []
+    for end, p, q, dp, dq in (
+        ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
+        ("to", point.p_to, point.q_to, point.dp_to, point.dq_to),
+    ):
+        size = np.hypot(p[rated], q[rated])
+        turn = p[rated] * dp[rated] + q[rated] * dq[rated]
+        parts.append(
+            constraint_rows(
+                kind="thermal",
+                names=network.branches,
+                owner=rated,
+                direction=point.p_from[rated] >= 0.0,
+                unit="MVA",
+                to_unit=base,
+                limit=limit,
+                value=size,
+                slack=limit - size,
+                multiplier=multiplier[end],
+                angle_gain=np.divide(turn, size, out=np.zeros_like(size), where=size > 0.0),
+                n_branch=network.n_branch,
+                tolerances=tolerances,
+                base_mva=base,
+                gave_way=soft & ((multiplier[end] > tolerances.shadow_price * base) | (size >= limit)),
+            )
+        )
+    return parts
 
 
 def flow_limit_rows(

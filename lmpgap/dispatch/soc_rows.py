@@ -10,7 +10,7 @@ from lmpgap.dispatch.limits import FlowLimits
 from lmpgap.dispatch.live import LiveNetwork
 from lmpgap.dispatch.options import DispatchOptions
 from lmpgap.dispatch.result import ConstraintRows, OperatingPoint
-from lmpgap.dispatch.rows import at_penalty, constraint_rows, flow_limit_rows, joined
+from lmpgap.dispatch.rows import apparent_power_rows, at_penalty, constraint_rows, flow_limit_rows, joined
 from lmpgap.dispatch.supply import rated_branches
 from lmpgap.scenario.network import FloatArray, IntArray, IntervalInputs, Network
 
@@ -81,35 +81,7 @@ def _thermal(
         options.tolerances,
         base,
     )
-    parts: list[ConstraintRows] = []
-    for end, p, q, dp, dq in (
-        ("from", point.p_from, point.q_from, point.dp_from, point.dq_from),
-        ("to", point.p_to, point.q_to, point.dp_to, point.dq_to),
-    ):
-        size = np.hypot(p[rated], q[rated])
-        turn = p[rated] * dp[rated] + q[rated] * dq[rated]
-        gain = np.divide(turn, size, out=np.zeros_like(size), where=size > 0.0)
-        limit = network.normal_rating[rated]
-        parts.append(
-            constraint_rows(
-                kind="thermal",
-                names=network.branches,
-                owner=rated,
-                direction=point.p_from[rated] >= 0.0,
-                unit="MVA",
-                to_unit=base,
-                limit=limit,
-                value=size,
-                slack=limit - size,
-                multiplier=head[end],
-                angle_gain=gain,
-                n_branch=network.n_branch,
-                tolerances=options.tolerances,
-                base_mva=base,
-                gave_way=soft & ((head[end] > options.tolerances.shadow_price * base) | (size >= limit)),
-            )
-        )
-    return parts
+    return apparent_power_rows(network, rated, point, head, soft, options.tolerances)
 
 
 def _angle(

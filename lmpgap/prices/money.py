@@ -142,11 +142,12 @@ class MoneyBalance:
         return largest / max(abs(self.load_payments), abs(self.generator_receipts), 1e-9)
 
     def rows(self) -> Iterator[tuple[str, str, float]]:
-        """Yield (item, basis, amount [$]) for the money table; each basis adds up to the surplus."""
+        """Yield (item, basis, amount [$]) for the money table; both splits add up to the surplus."""
         yield "load payments", "total", self.load_payments
         yield "generator receipts", "total", self.generator_receipts
         yield "surplus", "total", self.surplus
         yield "unserved load at its price", "total", self.unserved_load
+        yield "congestion by components less congestion rent", "total", self.congestion_difference
         for basis, parts, remainder in (
             (BY_COMPONENTS, self.by_components, self.remainder_by_components),
             (BY_CONSTRAINTS, self.by_constraints, self.remainder_by_constraints),

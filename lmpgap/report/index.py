@@ -18,10 +18,10 @@ from pathlib import Path
 from urllib.parse import quote
 
 from lmpgap.errors import DataError, Fault
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.files import write_atomically
 from lmpgap.report.text import money, number, percent, plain
 from lmpgap.report.view.model import PairView, WeeklyView
-from lmpgap.report.view.trust import USABLE
 
 FORMAT = 1
 _ATTEMPTS = 20
@@ -131,7 +131,7 @@ def week_record(view: WeeklyView, report: str) -> WeekRecord:
         int((code == position).sum())
         for code in view.trust.code.values()
         for position, word in enumerate(view.trust.words)
-        if word in USABLE
+        if word in USABLE_VERDICTS
     )
     means = view.hubs.means
     names = view.hubs.hubs.name

@@ -7,13 +7,13 @@ from typing import Any
 
 import numpy as np
 
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.embed import ArrayStore, compact_matrix, packed_amounts
 from lmpgap.report.palette import DARK, DEAD_BAND, LIGHT
 from lmpgap.report.pictures import Picture, opening_choice
 from lmpgap.report.text import plain
 from lmpgap.report.view.cube import COMPONENT_WORDS, COMPONENTS
 from lmpgap.report.view.model import WeeklyView
-from lmpgap.report.view.trust import USABLE
 
 SUM_TOLERANCE = 5e-4
 """Where the parts add up to the price this well, the page adds them itself [currency/MWh]."""
@@ -44,7 +44,7 @@ def page_data(view: WeeklyView, pictures: dict[str, Picture], store: ArrayStore)
         "prices": {price_set: _prices(view, price_set, store) for price_set in view.cube.sets},
         "verdicts": {
             "words": list(view.trust.words),
-            "usable": [word in USABLE for word in view.trust.words],
+            "usable": [word in USABLE_VERDICTS for word in view.trust.words],
             "code": {name: store.add(code.astype(np.int32)) for name, code in view.trust.code.items()},
         },
         "drivers": [

@@ -201,7 +201,7 @@ RUN_TABLES: dict[str, RunTable] = {
                     _INTERVAL,
                     _FORMULATION,
                     ("item", "text", "", "what the money is"),
-                    ("basis", "text", "", "total, components or constraints; each adds up to the surplus"),
+                    ("basis", "text", "", "total, components or constraints; both splits add up to the surplus"),
                     ("amount", "number", "$", ""),
                 ]
             ),

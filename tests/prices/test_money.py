@@ -197,6 +197,10 @@ def test_rows_of_each_basis_add_up_to_the_surplus():
         assert sum(amount for _, b, amount in rows if b == basis) == pytest.approx(money.surplus)
     total = {item: amount for item, basis, amount in rows if basis == "total"}
     assert total["load payments"] - total["generator receipts"] == pytest.approx(total["surplus"])
+    split_by = {(item, basis): amount for item, basis, amount in rows}
+    assert total["congestion by components less congestion rent"] == pytest.approx(
+        split_by["congestion", "components"] - split_by["congestion rent", "constraints"]
+    )
 
 
 def test_given_delivery_factors_in_two_islands():

@@ -5,10 +5,10 @@ from __future__ import annotations
 import numpy as np
 import plotly.graph_objects as go
 
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.figures.base import floats, hour_line, labels, money_unit, picture, time_axis
 from lmpgap.report.palette import DASH, LIGHT, SYMBOL, colour
 from lmpgap.report.view.model import WeeklyView
-from lmpgap.report.view.trust import USABLE
 
 LEAST_LOSS_MW = 1e-3
 """Smaller losses are a solver's dust [MW]."""
@@ -138,7 +138,7 @@ def verdict_strip(view: WeeklyView, hour: int) -> go.Figure:
             columns = np.flatnonzero(view.trust.code[formulation] == position)
             xs.append(columns)
             ys.append(np.full(len(columns), row))
-        usable = word in USABLE
+        usable = word in USABLE_VERDICTS
         key = "soft" if usable else "above_2"
         figure.add_trace(
             go.Scatter(

@@ -9,6 +9,7 @@ import pandas as pd
 
 from lmpgap.divergence.price_set import PriceSet
 from lmpgap.errors import DataError, Fault
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.text import number, percent
 from lmpgap.report.view.columns import checked_tables
 from lmpgap.report.view.constraints import constraints_view
@@ -39,7 +40,7 @@ from lmpgap.report.view.stakes import (
     settlement_table,
     stakes_table,
 )
-from lmpgap.report.view.trust import USABLE, trust_view
+from lmpgap.report.view.trust import trust_view
 from lmpgap.report.view.zones import zone_table
 from lmpgap.settlement.result import Settlement
 
@@ -189,7 +190,7 @@ def _tiles(
         int((code == position).sum())
         for code in trust.code.values()
         for position, word in enumerate(trust.words)
-        if word in USABLE
+        if word in USABLE_VERDICTS
     )
     tiles.append(
         Tile(

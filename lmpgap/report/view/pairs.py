@@ -9,12 +9,12 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.text import number, percent
 from lmpgap.report.view.cube import COMPONENTS, LADDER, POSTED, Matrix, PriceCube
 from lmpgap.report.view.hours import Hours
 from lmpgap.report.view.model import DriverBlock, PairView, Table, TrustView
 from lmpgap.report.view.nodes import Nodes
-from lmpgap.report.view.trust import USABLE
 from lmpgap.scenario.network import BoolArray, FloatArray
 
 PairKey = tuple[str, str]
@@ -213,7 +213,7 @@ def tracking_table(cube: PriceCube, load_mw: FloatArray, trust: TrustView, curre
 def _usable_hours(trust: TrustView, formulation: str) -> BoolArray | None:
     if formulation not in trust.code or not trust.words:
         return None
-    usable = np.append([word in USABLE for word in trust.words], False)  # position -1: not solved
+    usable = np.append([word in USABLE_VERDICTS for word in trust.words], False)  # position -1: not solved
     return np.asarray(usable[trust.code[formulation]], dtype=bool)
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from lmpgap.prices.certificate import USABLE_VERDICTS
 from lmpgap.report.text import number, percent, plain, small
 from lmpgap.report.view.cube import PriceCube
 from lmpgap.report.view.hours import Hours
@@ -12,16 +13,13 @@ from lmpgap.report.view.model import Table, TrustView
 from lmpgap.scenario.network import IntArray
 from lmpgap.tolerances import DEFAULT_TOLERANCES
 
-USABLE = ("certified", "exact", "close")
-"""Verdicts under which a price may be used."""
-
 _LISTED = 40
 
 
 def trust_view(solves: pd.DataFrame, prices: pd.DataFrame, cube: PriceCube, hours: Hours) -> TrustView:
     """Return the verdict of every solve and the worst residuals per formulation."""
     verdicts = solves["verdict"].astype(str)
-    words = tuple(sorted(set(verdicts), key=lambda word: (word not in USABLE, word)))
+    words = tuple(sorted(set(verdicts), key=lambda word: (word not in USABLE_VERDICTS, word)))
     position = hours.position(solves["interval_start"]) if len(solves) else np.zeros(0, dtype=np.int64)
     codes = {}
     for formulation in cube.formulations:
@@ -107,7 +105,7 @@ def _left_out(solves: pd.DataFrame, codes: dict[str, IntArray], hours: Hours) ->
         own = np.flatnonzero((formulations == formulation) & (place >= 0))
         word[place[own]], row_of[place[own]] = verdicts[own], own
         word[code < 0] = "not solved"
-        doubtful = ~np.isin(word.astype(str), USABLE)
+        doubtful = ~np.isin(word.astype(str), USABLE_VERDICTS)
         begins = doubtful & (np.r_[True, ~doubtful[:-1]] | np.r_[True, word[1:] != word[:-1]])
         for first in np.flatnonzero(begins).tolist():
             last = first
