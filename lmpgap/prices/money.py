@@ -132,7 +132,7 @@ class MoneyBalance:
 
     @property
     def congestion_difference(self) -> float:
-        """Congestion by components minus shadow price times limit [$]; zero only without losses."""
+        """Congestion by components minus shadow price times limit [$]; zero without losses, shifters and shunts."""
         return self.by_components.congestion - self.by_constraints.congestion_rent
 
     @property
